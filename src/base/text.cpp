@@ -81,7 +81,7 @@ std::string significant(double value, int digits) {
   return code == std::errc{} ? std::string(buffer.data(), end) : exact(value);
 }
 
-std::string quoted(std::string_view text, std::size_t max_bytes) {
+std::string shown_text(std::string_view text, std::size_t max_bytes) {
   static constexpr std::string_view kHex = "0123456789abcdef";
   std::string out = "\"";
   while (!text.empty()) {

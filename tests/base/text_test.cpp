@@ -23,9 +23,9 @@ TEST(Text, WritesNumbersThatReadBackExactly) {
 }
 
 TEST(Text, ShowsHostileTextHarmlessly) {
-  EXPECT_EQ(quoted("a\x1b[31m\n"), "\"a\\x1b[31m\\x0a\"");
-  EXPECT_EQ(quoted("\xff\xc3\xa9"), "\"\\xff\xc3\xa9\"");
-  EXPECT_LT(quoted(std::string(10000, 'x')).size(), 80u);
+  EXPECT_EQ(shown_text("a\x1b[31m\n"), "\"a\\x1b[31m\\x0a\"");
+  EXPECT_EQ(shown_text("\xff\xc3\xa9"), "\"\\xff\xc3\xa9\"");
+  EXPECT_LT(shown_text(std::string(10000, 'x')).size(), 80u);
 }
 
 TEST(Text, FindsTheWordThatWasMeant) {

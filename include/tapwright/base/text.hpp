@@ -23,7 +23,7 @@ namespace tapwright {
 
 /// `text` shortened and made printable for use inside a message: control characters and broken
 /// UTF-8 escaped, at most `max_bytes` bytes.
-[[nodiscard]] std::string quoted(std::string_view text, std::size_t max_bytes = 60);
+[[nodiscard]] std::string shown_text(std::string_view text, std::size_t max_bytes = 60);
 
 /// The candidate nearest to `word` by edit distance, when near enough to be a likely slip.
 [[nodiscard]] std::optional<std::string> nearest_word(std::string_view word,
