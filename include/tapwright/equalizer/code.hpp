@@ -10,8 +10,8 @@ struct Code {
   friend bool operator==(const Code&, const Code&) = default;
 };
 
-/// Codes 0, 1, 2 ... over the multiples of `step` inside [min, max], ascending by value. A bound
-/// within 1e-9 steps of a multiple counts as that multiple.
+/// The multiples k * step inside [min, max], ascending by value, each with code k. A bound within
+/// 1e-9 steps of a multiple counts as that multiple. Empty when no multiple lies inside.
 ///
 /// Errors: std::invalid_argument if step is not > 0, min > max, or over 100000 codes come out.
 [[nodiscard]] std::vector<Code> codes_from_step(double min, double max, double step);
