@@ -10,6 +10,10 @@
 
 namespace tapwright {
 
+/// A slope in time (jitter) or an eye width needs this many samples per UI; below it jitter is left
+/// out, with a warning.
+inline constexpr int kLeastSamplesPerUi = 4;
+
 /// Shape: states is (num CTLE states). All pulses at 1 V launch, on one grid.
 struct EyeModel {
   Link link;
@@ -23,11 +27,12 @@ struct EyeModel {
 
 /// Computes the pulses and chooses the span (math.md section 2: where the remaining sum of |p| at
 /// UI spacing falls under 0.2 % of the peak, or where a measured record sinks into its own noise).
+/// Aggressors' records are cut to as many UI before and after their own strong part.
 [[nodiscard]] EyeModel prepare(const Link& link);
 
-/// Sampling instants that a search looks at, in samples after the state's peak: one UI to either
-/// side, so that every phase of the grid meets every main index. One entry (0) per UI where there
-/// is one sample per UI.
+/// Sampling instants that a search looks at, in samples after the state's peak, ascending: the UI
+/// around the peak and one UI to either side, so that every phase of the grid meets every main
+/// index. -1, 0, 1 where there is one sample per UI.
 [[nodiscard]] std::vector<Eigen::Index> candidate_phases(const EyeModel& model);
 
 /// The unequalised cursors of one CTLE state and sampling instant within the span, at 1 V launch.

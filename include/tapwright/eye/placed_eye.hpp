@@ -40,9 +40,32 @@ struct PlacedEye {
   double amplitude_v = 0.0;              ///< peak launch amplitude of the swing
   double receiver_noise_v = 0.0;         ///< RMS at the slicer
   double transmitter_noise_ratio = 0.0;  ///< RMS over main cursor, from the signal-to-noise ratio
+  double quantile = 0.0;                 ///< Q at the target's error ratio
 };
 
 [[nodiscard]] PlacedEye place_eye(const EyeModel& model, const Place& place);
+
+/// sigma_X^2 = (L^2 - 1) / (3 (L - 1)^2): variance of evenly spaced, equally likely levels.
+[[nodiscard]] double symbol_variance(int levels);
+
+/// R_LM / (L - 1): half the smallest level spacing over the amplitude; R_LM is 1 for two levels.
+[[nodiscard]] double signal_share(const Signal& signal);
+
+/// An aggressor's cursors at its worst phase: x = by_fir * fir, or fixed (by_fir zero) when the
+/// aggressor has taps of its own. Its UI may differ from the victim's; samples between the grid's
+/// are interpolated linearly.
+///
+/// Shape: values_v is (num cursors), by_fir (num cursors, num taps). Units: volts.
+struct AggressorCursors {
+  Eigen::VectorXd values_v;
+  Eigen::MatrixXd by_fir;
+};
+enum class AggressorPhase {
+  kLargestSum,       ///< of sum |x_k|: the worst case
+  kLargestVariance,  ///< of sum x_k^2: at an error ratio (IEEE 802.3 Annex 93A)
+};
+[[nodiscard]] AggressorCursors aggressor_cursors(const PlacedEye& eye, std::size_t aggressor,
+                                                 const Eigen::VectorXd& fir, AggressorPhase rule);
 
 /// Sum over aggressors of max over phase of sum_k |x_k|, and each of them.
 ///
@@ -67,8 +90,8 @@ struct CrosstalkPeak {
 [[nodiscard]] double worst_case_height_v(const PlacedEye& eye, const double* fir,
                                          const double* dfe_v);
 
-/// The innermost kernel: sum over k of |sum_i cursors(k, i) fir_i| over all rows, main and DFE rows
-/// included; 200 cursors x 4 taps take well under 200 ns.
+/// The innermost kernel: sum over k of |sum_i cursors(k, i) fir_i| over all rows; 200 cursors x 4
+/// taps take well under 200 ns.
 [[nodiscard]] double absolute_sum_v(const double* cursors, Eigen::Index num_cursors,
                                     Eigen::Index num_taps, const double* fir);
 

@@ -39,9 +39,11 @@ struct Score {
   Eigen::VectorXd settled_dfe_v;
   EyeHeights settled;  ///< with the DFE where adaptation would leave it
 
-  double eye_width_worst_case_ui = 0.0;  ///< phases around t_s where the worst case stays open
-  std::optional<double> eye_width_ui;    ///< the same at the error ratio
-  std::optional<double> ratio_db;        ///< 20 log10(signal_v / N(P)); empty when q_0 <= 0
+  /// Phases around t_s where the worst case stays open, at most 1; empty with too few samples per
+  /// UI.
+  std::optional<double> eye_width_worst_case_ui;
+  std::optional<double> eye_width_ui;  ///< the same at the error ratio
+  std::optional<double> ratio_db;      ///< 20 log10(signal_v / N(P)); empty when q_0 <= 0
 
   double peak_input_v = 0.0;  ///< receiver input, peak differential
   std::optional<double> peak_input_limit_v;
