@@ -50,12 +50,13 @@ struct Termination {
   [[nodiscard]] std::complex<double> at(double frequency_hz) const;
 };
 
-/// Voltage across the load over half the open-circuit voltage of the source:
+/// Voltage across the load over half the voltage of the source's generator:
 ///
-///     H = s21 (1 - G1)(1 + G2) / (1 - s11 G1 - s22 G2 + G1 G2 (s11 s22 - s12 s21))
+///     H = D s21 (1 - G1)(1 + G2) / (1 - s11 G1 - s22 G2 + G1 G2 (s11 s22 - s12 s21))
 ///
 /// G1, G2 the source's and the load's reflection seen from the port's reference, times
-/// sqrt(z2 / z1) where the references differ.
+/// sqrt(z2 / z1) where the references differ. D = 1 / (1 + j w R C) is the source's own divider, its
+/// capacitance C standing behind its resistance (or impedance) R; 1 without capacitance.
 ///
 /// Shape:  two_port has two ports.
 /// Errors: std::invalid_argument otherwise, or if a termination is no finite number or has a
