@@ -1,0 +1,32 @@
+#include "link/files.hpp"
+
+#include <algorithm>
+#include <filesystem>
+
+#include "tapwright/base/text.hpp"
+
+namespace tapwright {
+
+std::string InputFiles::resolved(const std::string& name) const {
+  return (std::filesystem::path(base_) / std::filesystem::path(name)).string();
+}
+
+void InputFiles::add(InputFile file) {
+  const bool known = std::any_of(used_.begin(), used_.end(),
+                                 [&](const InputFile& one) { return one.path == file.path; });
+  if (!known) used_.push_back(std::move(file));
+}
+
+std::optional<std::string> InputFiles::read(const Section& name) {
+  const std::string path = resolved(name.text());
+  Result<TextFile> file = read_text_file(path);
+  if (!file) {
+    for (const Diagnostic& note : file.notes)
+      name.error(shown_text(name.text()) + ": " + note.message);
+    return std::nullopt;
+  }
+  add({path, file.value->sha256});
+  return std::move(file.value->text);
+}
+
+}  // namespace tapwright
