@@ -1,0 +1,315 @@
+#include "eye/tail_contour.hpp"
+
+#include <algorithm>
+#include <cmath>
+#include <functional>
+#include <limits>
+#include <numbers>
+#include <stdexcept>
+
+namespace tapwright {
+namespace {
+
+// ln cosh x = x^2/2 - x^4/12 + x^6/45 - 17 x^8/2520 + 31 x^10/14175 - ...; below this |x| the next
+// term (691 x^12 / 935550) is under 6e-8.
+constexpr double kSmall = 0.45;
+constexpr double kC4 = -1.0 / 12.0;
+constexpr double kC6 = 1.0 / 45.0;
+constexpr double kC8 = -17.0 / 2520.0;
+constexpr double kC10 = 31.0 / 14175.0;
+constexpr double kNegligible = 1e-9;
+
+std::vector<double> binary_amplitudes(const Disturbance& disturbance) {
+  std::vector<double> amplitudes;
+  const int levels = disturbance.levels;
+  if (levels < 2 || (levels & (levels - 1)) != 0) {
+    throw std::invalid_argument("Disturbance: the number of levels must be a power of two");
+  }
+  amplitudes.reserve(static_cast<std::size_t>(disturbance.symbols_v.size() * (levels > 2 ? 2 : 1) +
+                                              disturbance.binary_v.size()));
+  for (int weight = levels / 2; weight >= 1; weight /= 2) {
+    for (const double v : disturbance.symbols_v) amplitudes.push_back(v * weight / (levels - 1.0));
+  }
+  for (const double v : disturbance.binary_v) amplitudes.push_back(v);
+  return amplitudes;
+}
+
+}  // namespace
+
+Cumulant::Cumulant(std::vector<double> amplitudes_v, double sigma_v)
+    : amplitudes_v_(std::move(amplitudes_v)), sigma_v_(sigma_v) {
+  for (double& b : amplitudes_v_) b = std::abs(b);
+  std::sort(amplitudes_v_.begin(), amplitudes_v_.end(), std::greater<>());
+  while (!amplitudes_v_.empty() && amplitudes_v_.back() == 0.0) amplitudes_v_.pop_back();
+  power_sums_.resize(amplitudes_v_.size() + 1);
+  for (std::size_t i = amplitudes_v_.size(); i-- > 0;) {
+    const double b2 = amplitudes_v_[i] * amplitudes_v_[i];
+    const double b4 = b2 * b2;
+    const PowerSums& next = power_sums_[i + 1];
+    power_sums_[i] = {next.p2 + b2, next.p4 + b4, next.p6 + b4 * b2, next.p8 + b4 * b4,
+                      next.p10 + b4 * b4 * b2};
+    worst_v_ += amplitudes_v_[i];
+  }
+}
+
+Cumulant::Cumulant(const Disturbance& disturbance)
+    : Cumulant(binary_amplitudes(disturbance), disturbance.sigma_v) {}
+
+std::size_t Cumulant::first_small(double abs_z) const {
+  const auto it = std::lower_bound(amplitudes_v_.begin(), amplitudes_v_.end(), kSmall / abs_z,
+                                   std::greater<>());
+  return static_cast<std::size_t>(it - amplitudes_v_.begin());
+}
+
+Cumulant::At Cumulant::at(double theta) const {
+  const std::size_t small = first_small(theta);
+  const PowerSums& s = power_sums_[small];
+  const double t2 = theta * theta;
+  const double p2 = s.p2 + sigma_v_ * sigma_v_;
+  At at;
+  at.k =
+      t2 * (p2 / 2 + t2 * (kC4 * s.p4 + t2 * (kC6 * s.p6 + t2 * (kC8 * s.p8 + t2 * kC10 * s.p10))));
+  at.k1 =
+      theta * (p2 + t2 * (4 * kC4 * s.p4 +
+                          t2 * (6 * kC6 * s.p6 + t2 * (8 * kC8 * s.p8 + t2 * 10 * kC10 * s.p10))));
+  at.k2 = p2 + t2 * (12 * kC4 * s.p4 +
+                     t2 * (30 * kC6 * s.p6 + t2 * (56 * kC8 * s.p8 + t2 * 90 * kC10 * s.p10)));
+  double product = 1.0;
+  for (std::size_t i = 0; i < small; ++i) {
+    const double b = amplitudes_v_[i];
+    const double e = std::exp(-2.0 * theta * b);  // ln cosh = theta b + ln((1 + e)/2)
+    const double inverse = 1.0 / (1.0 + e);
+    const double t = (1.0 - e) * inverse;
+    at.k += theta * b;
+    at.k1 += b * t;
+    at.k2 += b * b * 4.0 * e * inverse * inverse;
+    product *= 0.5 * (1.0 + e);
+    if (product < 1e-250) {
+      at.k += std::log(product);
+      product = 1.0;
+    }
+  }
+  at.k += std::log(product);
+  return at;
+}
+
+namespace {
+
+/// Root of a rising function f (value and slope) on (0, inf): Newton inside a bracket.
+template <class Function>
+std::optional<double> rising_root(double start, double relative, const Function& f) {
+  double lo = 0.0;
+  double hi = 0.0;  // 0 = none yet
+  double theta = start;
+  for (int i = 0; i < 100; ++i) {
+    const auto [value, slope] = f(theta);
+    if (value < 0.0) {
+      lo = theta;
+    } else {
+      hi = theta;
+    }
+    double next = slope > 0.0 ? theta - value / slope : 0.0;
+    const double top = hi > 0.0 ? hi : 4.0 * theta;
+    if (!(next > lo && next < top)) next = hi > 0.0 ? 0.5 * (lo + hi) : 4.0 * theta;
+    if (!std::isfinite(next) || next > 1e12 * start) return std::nullopt;
+    if (std::abs(next - theta) <= relative * theta) return next;
+    theta = next;
+  }
+  return theta;
+}
+
+}  // namespace
+
+std::optional<double> Cumulant::theta_of_quantile(double q) const {
+  const double variance = variance_v2();
+  if (!(variance > 0.0)) return std::nullopt;
+  if (sigma_v_ == 0.0 &&
+      static_cast<double>(amplitudes_v_.size()) * std::numbers::ln2 <= 0.5 * q * q) {
+    return std::nullopt;
+  }
+  return rising_root(q / std::sqrt(variance), 1e-4, [&](double theta) {
+    const At at_theta = at(theta);
+    return std::pair(theta * at_theta.k1 - at_theta.k - 0.5 * q * q, theta * at_theta.k2);
+  });
+}
+
+std::optional<double> Cumulant::theta_of_level(double x) const {
+  const double variance = variance_v2();
+  if (!(variance > 0.0) || (sigma_v_ == 0.0 && x >= worst_v_)) return std::nullopt;
+  return rising_root(x / variance, 1e-4, [&](double theta) {
+    const At at_theta = at(theta);
+    return std::pair(at_theta.k1 - x, at_theta.k2);
+  });
+}
+
+double TailContour::period_for(double theta, const Cumulant::At& at, double probability) {
+  return std::max(std::log(1.0 / probability) + 14.0, theta * at.k1 - at.k + 17.0) / theta;
+}
+
+std::optional<TailContour> TailContour::along(const Cumulant& cumulant, double theta,
+                                              double period_v, int max_points) {
+  TailContour contour;
+  contour.theta_ = theta;
+  contour.step_ = 2.0 * std::numbers::pi / period_v;
+  const double h = contour.step_;
+  const double sigma2 = cumulant.sigma_v() * cumulant.sigma_v();
+  // Nothing but the Gaussian part is sure to have died away for good: equal amplitudes come back.
+  const double y_max = std::sqrt(-2.0 * std::log(kNegligible) / sigma2);
+  if (!(y_max / h < max_points)) return std::nullopt;
+  const auto n = static_cast<std::size_t>(y_max / h) + 2;
+  const std::size_t padded = n + n % 2;
+  contour.real_.assign(padded, 1.0);
+  contour.imag_.assign(padded, 0.0);
+  contour.k_ = cumulant.at(theta).k;
+
+  // Amplitudes that matter: prod of cosh(z b) / cosh(theta b) = cos(y b) + i tanh(theta b) sin(y
+  // b), two points at a time, the angle stepped by rotation.
+  using Lanes = double __attribute__((vector_size(16)));
+  const std::size_t num_large = cumulant.first_small(std::hypot(theta, y_max));
+  for (std::size_t i = 0; i < num_large; ++i) {
+    const double b = cumulant.amplitudes_v()[i];
+    const double t = std::tanh(theta * b);
+    const double c1 = std::cos(h * b);
+    const double s1 = std::sin(h * b);
+    const double c2 = c1 * c1 - s1 * s1;
+    const double s2 = 2.0 * c1 * s1;
+    Lanes c = {1.0, c1};
+    Lanes s = {0.0, s1};
+    for (std::size_t j = 0; j < padded; j += 2) {
+      Lanes re;
+      Lanes im;
+      __builtin_memcpy(&re, &contour.real_[j], sizeof re);
+      __builtin_memcpy(&im, &contour.imag_[j], sizeof im);
+      const Lanes ts = t * s;
+      const Lanes re_next = re * c - im * ts;
+      const Lanes im_next = re * ts + im * c;
+      __builtin_memcpy(&contour.real_[j], &re_next, sizeof re);
+      __builtin_memcpy(&contour.imag_[j], &im_next, sizeof im);
+      const Lanes c_next = c * c2 - s * s2;
+      s = s * c2 + c * s2;
+      c = c_next;
+    }
+  }
+  // The small ones through their power sums, with the Gaussian part.
+  const Cumulant::PowerSums& sums = cumulant.power_sums(num_large);
+  const double p2 = 0.5 * (sums.p2 + sigma2);
+  const auto series = [&](std::complex<double> z) {
+    const std::complex<double> z2 = z * z;
+    return z2 * (p2 + z2 * (kC4 * sums.p4 +
+                            z2 * (kC6 * sums.p6 + z2 * (kC8 * sums.p8 + z2 * (kC10 * sums.p10)))));
+  };
+  const double at_theta = series({theta, 0.0}).real();
+  for (std::size_t j = 0; j < padded; ++j) {
+    const std::complex<double> exponent = series({theta, static_cast<double>(j) * h});
+    const double scale = std::exp(exponent.real() - at_theta);
+    const double c = std::cos(exponent.imag());
+    const double s = std::sin(exponent.imag());
+    const double re = contour.real_[j];
+    const double im = contour.imag_[j];
+    contour.real_[j] = scale * (re * c - im * s);
+    contour.imag_[j] = scale * (re * s + im * c);
+  }
+  contour.real_[0] *= 0.5;  // the trapezoid rule's first point
+  contour.imag_[0] *= 0.5;
+  return contour;
+}
+
+TailContour::Sums TailContour::sums(double x) const {
+  // e^(-i y x), stepped by rotation.
+  const double c1 = std::cos(step_ * x);
+  const double s1 = -std::sin(step_ * x);
+  double c = 1.0;
+  double s = 0.0;
+  Sums sums;
+  for (std::size_t j = 0; j < real_.size(); ++j) {
+    const double re = real_[j] * c - imag_[j] * s;
+    const double im = real_[j] * s + imag_[j] * c;
+    const double y = static_cast<double>(j) * step_;
+    sums.plain += re;
+    sums.over_z += (re * theta_ + im * y) / (theta_ * theta_ + y * y);
+    const double c_next = c * c1 - s * s1;
+    s = s * c1 + c * s1;
+    c = c_next;
+  }
+  const double scale = step_ / std::numbers::pi * std::exp(k_ - theta_ * x);
+  sums.plain *= scale;
+  sums.over_z *= scale;
+  return sums;
+}
+
+double TailContour::exceedance(double x) const { return sums(x).over_z; }
+double TailContour::density(double x) const { return sums(x).plain; }
+
+double TailContour::level_of(double probability, double start_v) const {
+  // Newton on ln P, inside a bracket as soon as there is one: with little noise P is a staircase.
+  double x = start_v;
+  double low = -std::numeric_limits<double>::infinity();
+  double high = std::numeric_limits<double>::infinity();
+  const double largest_step = 6.0 / theta_;
+  for (int i = 0; i < 200; ++i) {
+    const Sums at = sums(x);
+    (at.over_z > probability ? low : high) = x;
+    double next = at.over_z > 0.0 && at.plain > 0.0
+                      ? x + std::log(at.over_z / probability) * at.over_z / at.plain
+                      : x + (at.over_z > probability ? largest_step : -largest_step);
+    next = std::clamp(next, x - largest_step, x + largest_step);
+    if (!(next > low && next < high)) next = 0.5 * (low + high);
+    const double step = next - x;
+    x = next;
+    if (std::abs(step) < 1e-7 / theta_ || high - low < 1e-7 / theta_) break;
+  }
+  return x;
+}
+
+void TailContour::gradient(double x, const std::vector<double>& amplitudes_v, double sigma_v,
+                           std::vector<double>& by_amplitude, double& by_sigma) const {
+  const std::size_t n = real_.size();
+  std::vector<double> re(n);
+  std::vector<double> im(n);
+  double density = 0.0;
+  std::complex<double> moment[5] = {};  // sums of W z, z^3 ... z^9
+  for (std::size_t j = 0; j < n; ++j) {
+    const double y = static_cast<double>(j) * step_;
+    const std::complex<double> w = std::complex(real_[j], imag_[j]) * std::polar(1.0, -y * x);
+    re[j] = w.real();
+    im[j] = w.imag();
+    density += w.real();
+    const std::complex<double> z(theta_, y);
+    std::complex<double> power = w * z;
+    for (auto& m : moment) {
+      m += power;
+      power *= z * z;
+    }
+  }
+  const double abs_z = std::hypot(theta_, static_cast<double>(n) * step_);
+  by_sigma = sigma_v * moment[0].real() / density;
+  by_amplitude.resize(amplitudes_v.size());
+  for (std::size_t k = 0; k < amplitudes_v.size(); ++k) {
+    const double b = amplitudes_v[k];
+    double sum = 0.0;
+    if (std::abs(b) * abs_z < kSmall) {
+      const double b2 = b * b;
+      sum =
+          b * (moment[0].real() +
+               b2 * (4 * kC4 * moment[1].real() +
+                     b2 * (6 * kC6 * moment[2].real() +
+                           b2 * (8 * kC8 * moment[3].real() + b2 * 10 * kC10 * moment[4].real()))));
+    } else {
+      // tanh(z b) = (t + i c s (1 - t^2)) / (c^2 + t^2 s^2).
+      const double t = std::tanh(theta_ * b);
+      const double c1 = std::cos(step_ * b);
+      const double s1 = std::sin(step_ * b);
+      double c = 1.0;
+      double s = 0.0;
+      for (std::size_t j = 0; j < n; ++j) {
+        sum += (re[j] * t - im[j] * c * s * (1.0 - t * t)) / (c * c + t * t * s * s);
+        const double c_next = c * c1 - s * s1;
+        s = s * c1 + c * s1;
+        c = c_next;
+      }
+    }
+    by_amplitude[k] = sum / density;
+  }
+}
+
+}  // namespace tapwright
