@@ -7,6 +7,7 @@
 #include <stdexcept>
 #include <string>
 
+#include "eye/instant.hpp"
 #include "tapwright/base/normal.hpp"
 #include "tapwright/base/units.hpp"
 
@@ -32,29 +33,6 @@ Eigen::MatrixXd shifted_columns(const FirLimits& limits, const Eigen::VectorXd& 
         .segment(limits.taps[i].position - range.first, row.size()) = row;
   }
   return columns;
-}
-
-CursorMap map_at(const EyeModel& model, const Place& place, Eigen::Index offset,
-                 double amplitude_v) {
-  const Device& device = model.link.device;
-  const Eigen::Index phase = place.phase_samples + offset;
-  const CursorRow row = victim_row(model, place.ctle_index, phase);
-  CursorMap map;
-  map.cursors = shifted_columns(device.transmitter.fir, amplitude_v * row.values);
-  map.main_index = row.main_index - range_of(device.transmitter.fir).first;
-  const int per_ui = model.input.samples_per_ui();
-  const Jitter& jitter = model.link.jitter;
-  if (per_ui >= kLeastSamplesPerUi && (jitter.random_ui > 0.0 || jitter.dual_dirac_peak_ui > 0.0)) {
-    const Eigen::VectorXd slope = (victim_row(model, place.ctle_index, phase + 1).values -
-                                   victim_row(model, place.ctle_index, phase - 1).values) *
-                                  (amplitude_v * per_ui / 2.0);
-    map.jitter = shifted_columns(device.transmitter.fir, slope);
-  }
-  for (const DfeTap& tap : device.receiver.dfe) {
-    const Eigen::Index at = map.main_index + tap.position;
-    map.dfe_rows.push_back(at < map.cursors.rows() ? at : -1);
-  }
-  return map;
 }
 
 // Two doubles at once: what every x86-64 and ARMv8 has, and one order of summation on each.
@@ -132,6 +110,34 @@ double height_of(const PlacedEye& eye, const CursorMap& map, const double* fir,
 
 }  // namespace
 
+CursorMap cursor_map(const EyeModel& model, const Place& place, double offset_samples,
+                     double amplitude_v) {
+  const Device& device = model.link.device;
+  const double whole = std::floor(offset_samples);
+  const double share = offset_samples - whole;
+  const Eigen::Index phase = place.phase_samples + static_cast<Eigen::Index>(whole);
+  const auto row_at = [&](Eigen::Index shift) -> Eigen::VectorXd {
+    Eigen::VectorXd row = victim_row(model, place.ctle_index, phase + shift).values;
+    if (share > 0.0) {
+      row += share * (victim_row(model, place.ctle_index, phase + shift + 1).values - row);
+    }
+    return amplitude_v * row;
+  };
+  CursorMap map;
+  map.cursors = shifted_columns(device.transmitter.fir, row_at(0));
+  map.main_index = model.span_ui[0] - range_of(device.transmitter.fir).first;
+  const int per_ui = model.input.samples_per_ui();
+  const Jitter& jitter = model.link.jitter;
+  if (per_ui >= kLeastSamplesPerUi && (jitter.random_ui > 0.0 || jitter.dual_dirac_peak_ui > 0.0)) {
+    map.jitter = shifted_columns(device.transmitter.fir, (row_at(1) - row_at(-1)) * (per_ui / 2.0));
+  }
+  for (const DfeTap& tap : device.receiver.dfe) {
+    const Eigen::Index at = map.main_index + tap.position;
+    map.dfe_rows.push_back(at < map.cursors.rows() ? at : -1);
+  }
+  return map;
+}
+
 double symbol_variance(int levels) {
   const double n = levels;
   return (n * n - 1.0) / (3.0 * (n - 1.0) * (n - 1.0));
@@ -164,10 +170,10 @@ PlacedEye place_eye(const EyeModel& model, const Place& place) {
   // A phase on the mask's edge belongs to it: 1e-9 absorbs the rounding of decimal fractions.
   const auto reach = static_cast<Eigen::Index>(
       std::floor((model.link.mask_width_ui / 2.0 + clock_ui) * per_ui + 1e-9));
-  eye.phases.push_back(map_at(model, place, 0, eye.amplitude_v));
+  eye.phases.push_back(cursor_map(model, place, 0.0, eye.amplitude_v));
   for (Eigen::Index offset = 1; offset <= reach; ++offset) {
-    eye.phases.push_back(map_at(model, place, -offset, eye.amplitude_v));
-    eye.phases.push_back(map_at(model, place, offset, eye.amplitude_v));
+    eye.phases.push_back(cursor_map(model, place, -static_cast<double>(offset), eye.amplitude_v));
+    eye.phases.push_back(cursor_map(model, place, static_cast<double>(offset), eye.amplitude_v));
   }
   return eye;
 }
