@@ -1,0 +1,155 @@
+#include <nlohmann/json.hpp>
+
+#include "tapwright/base/units.hpp"
+#include "tapwright/link/register_writes.hpp"
+#include "tapwright/report/solution_report.hpp"
+
+namespace tapwright {
+namespace {
+
+using Json = nlohmann::ordered_json;
+
+Json mv(double v) { return v_to_mv(v); }
+Json mv(const std::optional<double>& v) { return v ? Json(v_to_mv(*v)) : Json(nullptr); }
+Json or_null(const std::optional<double>& v) { return v ? Json(*v) : Json(nullptr); }
+
+Json settings_json(const EyeModel& model, const Settings& settings) {
+  const Device& device = model.link.device;
+  Json out;
+  Json taps = Json::array();
+  for (const KnobReading& r : readings(device, settings)) {
+    if (r.knob.kind == Knob::Kind::kSwing) out["swing_mvppd"] = r.value;
+    if (r.knob.kind != Knob::Kind::kFir) continue;
+    taps.push_back({{"position", device.transmitter.fir.taps[r.knob.index].position},
+                    {"value", r.value},
+                    {"code", r.code ? Json(*r.code) : Json(nullptr)}});
+  }
+  out["tx_fir"] = taps;
+  const CtleState& state = device.receiver.ctle[settings.ctle_index];
+  out["ctle"] = {{"state", state.code}, {"label", state.label}};
+  if (state.gain) out["ctle"]["gain"] = state.gain->code;
+  Json dfe = Json::array();
+  for (const double d : settings.dfe_v) dfe.push_back(v_to_mv(d));
+  out["dfe_mv"] = dfe;
+  out["phase_ui"] = static_cast<double>(settings.phase_samples) / model.link.samples_per_ui;
+  return out;
+}
+
+Json score_json(const Score& s) {
+  Json aggressors = Json::array();
+  for (const double v : s.aggressors_v) aggressors.push_back(v_to_mv(v));
+  Json settled = Json::array();
+  for (const double v : s.settled_dfe_v) settled.push_back(v_to_mv(v));
+  return {{"eye_height_worst_case_mv", mv(s.height.worst_case_v)},
+          {"eye_height_at_error_ratio_mv", mv(s.height.at_error_ratio_v)},
+          {"eye_width_worst_case_ui", s.eye_width_worst_case_ui},
+          {"eye_width_ui", or_null(s.eye_width_ui)},
+          {"ratio_db", or_null(s.ratio_db)},
+          {"main_cursor_mv", mv(s.main_cursor_v)},
+          {"budget_mv",
+           {{"signal", mv(s.signal_v)},
+            {"isi", mv(s.isi_v)},
+            {"isi_independent_symbols", mv(s.isi_independent_v)},
+            {"crosstalk", mv(s.crosstalk_v)},
+            {"crosstalk_of_each", aggressors},
+            {"dual_dirac", mv(s.dual_dirac_v)},
+            {"gaussian", mv(s.gaussian_v)},
+            {"sigma", mv(s.sigma_v)},
+            {"sigma_receiver", mv(s.sigma_receiver_v)},
+            {"sigma_transmitter", mv(s.sigma_transmitter_v)},
+            {"sigma_jitter", mv(s.sigma_jitter_v)},
+            {"sensitivity", mv(s.sensitivity_v)}}},
+          {"with_settled_dfe",
+           {{"dfe_mv", settled},
+            {"eye_height_worst_case_mv", mv(s.settled.worst_case_v)},
+            {"eye_height_at_error_ratio_mv", mv(s.settled.at_error_ratio_v)}}},
+          {"peak_input_mvppd", peak_v_to_mvppd(s.peak_input_v)},
+          {"outside_span_mv", mv(s.outside_span_v)},
+          {"target_met", s.target_met()},
+          {"missed", s.missed}};
+}
+
+const char* name_of(Proof::Kind kind) {
+  switch (kind) {
+    case Proof::Kind::kProven: return "proven";
+    case Proof::Kind::kBounded: return "bounded";
+    case Proof::Kind::kExhausted: return "exhausted";
+    case Proof::Kind::kNone: break;
+  }
+  return "none";
+}
+
+Json proof_json(const Proof& proof) {
+  const bool claims = proof.kind != Proof::Kind::kNone;
+  return {{"kind", name_of(proof.kind)},
+          {"bound_mv", claims ? mv(proof.bound_v) : Json(nullptr)},
+          {"gap_mv", claims ? mv(proof.gap_v) : Json(nullptr)},
+          {"searched",
+           {{"cells", proof.num_cells}, {"nodes", proof.num_nodes}, {"settings", proof.num_settings}}},
+          {"reason", proof.reason}};
+}
+
+Json change_json(const std::optional<KnobSensitivity::Change>& change) {
+  if (!change) return nullptr;
+  return {{"fixed_mv", mv(change->fixed_v)}, {"readapted_mv", mv(change->readapted_v)}};
+}
+
+}  // namespace
+
+std::string json_of(const SolutionReport& report) {
+  const EyeModel& model = *report.model;
+  const Solution& s = report.solution;
+  Json out;
+  out["format"] = "tapwright.solution/1";
+  out["version"] = TAPWRIGHT_VERSION;
+  out["name"] = model.link.name;
+  out["objective"] = model.link.objective == ObjectiveKind::kWorstCase ? "worst_case" : "at_error_ratio";
+  out["error_ratio"] = model.link.target.error_ratio;
+  out["settings"] = settings_json(model, s.settings);
+  Json writes = Json::array();
+  for (const RegisterWrite& w : register_writes(model.link, s.settings).writes) {
+    writes.push_back({{"field", w.field}, {"address", w.address}, {"high_bit", w.high_bit},
+                      {"low_bit", w.low_bit}, {"value", w.value}});
+  }
+  if (!writes.empty()) out["registers"] = writes;
+  out["score"] = score_json(s.score);
+  out["proof"] = proof_json(s.proof);
+  Json compared = Json::array();
+  for (const Compared& c : s.compared) {
+    Json row = {{"method", c.name}};
+    if (c.settings) row["settings"] = settings_json(model, *c.settings);
+    if (c.score) row["score"] = score_json(*c.score);
+    if (!c.note.empty()) row["note"] = c.note;
+    compared.push_back(row);
+  }
+  out["compared"] = compared;
+  Json trail = Json::array();
+  for (const TrailStep& t : s.trail) {
+    trail.push_back({{"stage", t.stage}, {"height_mv", mv(t.height_v)}, {"bound_mv", mv(t.bound_v)},
+                     {"settings_scored", t.num_settings}});
+  }
+  out["trail"] = trail;
+  Json sensitivity = Json::array();
+  for (const KnobSensitivity& k : report.sensitivity) {
+    sensitivity.push_back({{"knob", k.knob.name}, {"at", k.shown}, {"down", change_json(k.down)},
+                           {"up", change_json(k.up)}});
+  }
+  out["sensitivity"] = {{"knobs", sensitivity}};
+  out["limited_by"] = report.limited_by;
+  out["span_ui"] = model.span_ui;
+  out["span_reason"] = model.span_reason;
+  Json inputs = Json::array();
+  for (const InputFile& input : model.link.inputs) {
+    inputs.push_back({{"file", input.path}, {"sha256", input.sha256}});
+  }
+  out["inputs"] = inputs;
+  Json warnings = Json::array();
+  for (const auto* notes : {&model.link.warnings, &model.warnings, &s.warnings}) {
+    for (const Diagnostic& note : *notes) warnings.push_back(to_string(note));
+  }
+  out["warnings"] = warnings;
+  out["caution"] = caution();
+  return out.dump(2, ' ', false, Json::error_handler_t::replace) + "\n";
+}
+
+}  // namespace tapwright
