@@ -1,0 +1,54 @@
+#include <ostream>
+
+#include "cli/link_input.hpp"
+#include "tapwright/report/solution_report.hpp"
+#include "tapwright/search/solve.hpp"
+
+namespace tapwright::cli {
+namespace {
+
+const std::vector<std::string> kOutputs = {"--json"};
+
+ExitCode run_solve(const Arguments& arguments, Console& console) {
+  const RunControl control = run_control(arguments, console);
+  SearchOptions options;
+  options.max_nodes = arguments.integer("--max-nodes", 1, 1'000'000'000'000).value_or(options.max_nodes);
+  options.max_seconds = arguments.number("--max-seconds", 0.001, 1e7);
+  if (!outputs_can_be_written(arguments, console, kOutputs)) return ExitCode::kBadInput;
+  const auto model = model_from(arguments, console);
+  if (!model) return ExitCode::kBadInput;
+
+  const SolutionReport report = report_on(*model, solve(*model, options, control));
+  control.report(1.0, "search");
+  if (console.stop.stop_requested()) {
+    console.error("stopped; nothing was written");
+    return ExitCode::kStopped;
+  }
+  if (!write_to(arguments, console, "--json", json_of(report))) return ExitCode::kBadInput;
+  if (!takes_standard_output(arguments, kOutputs)) console.out << text_of(report);
+  return report.solution.score.target_met() ? ExitCode::kOk : ExitCode::kTargetMissed;
+}
+
+}  // namespace
+
+Command solve_command() {
+  return {"solve",
+          "the settings that open the eye of a link most, and how sure that is",
+          "LINK is a link file (tapwright example prints one to start from, tapwright schema every key). "
+          "Without it the built-in sample is solved. The answer goes to standard output as text; "
+          "the exit code is 1 when it misses the link's target.",
+          [] {
+            std::vector<OptionRow> rows = {
+                {"LINK", "", "the built-in sample", "link file"},
+                set_row(),
+                {"--json", "FILE", "", "write the answer as JSON (tapwright.solution/1); - is standard output"},
+                {"--max-nodes", "N", "50000000", "boxes of FIR codes to look at before settling for a bound"},
+                {"--max-seconds", "S", "none", "likewise in seconds; the answer may then differ between runs"},
+                threads_row()};
+            for (OptionRow& row : common_rows()) rows.push_back(std::move(row));
+            return rows;
+          }(),
+          run_solve};
+}
+
+}  // namespace tapwright::cli
