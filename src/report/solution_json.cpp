@@ -42,7 +42,7 @@ Json score_json(const Score& s) {
   for (const double v : s.settled_dfe_v) settled.push_back(v_to_mv(v));
   return {{"eye_height_worst_case_mv", mv(s.height.worst_case_v)},
           {"eye_height_at_error_ratio_mv", mv(s.height.at_error_ratio_v)},
-          {"eye_width_worst_case_ui", s.eye_width_worst_case_ui},
+          {"eye_width_worst_case_ui", or_null(s.eye_width_worst_case_ui)},
           {"eye_width_ui", or_null(s.eye_width_ui)},
           {"ratio_db", or_null(s.ratio_db)},
           {"main_cursor_mv", mv(s.main_cursor_v)},

@@ -89,8 +89,8 @@ std::string eye_section(const SolutionReport& report) {
   rows.push_back({at + ", mV", cell([](const Score& x) { return mv(x.height.at_error_ratio_v); }),
                   mv(s.score.height.at_error_ratio_v), worst ? "" : want_height});
   rows.push_back({"width, worst case, UI",
-                  cell([](const Score& x) { return fixed(x.eye_width_worst_case_ui, 3); }),
-                  fixed(s.score.eye_width_worst_case_ui, 3),
+                  cell([&](const Score& x) { return ui(x.eye_width_worst_case_ui); }),
+                  ui(s.score.eye_width_worst_case_ui),
                   worst && target.eye_width_ui > 0.0 ? fixed(target.eye_width_ui, 3) : ""});
   rows.push_back({"width at the error ratio, UI",
                   cell([&](const Score& x) { return ui(x.eye_width_ui); }), ui(s.score.eye_width_ui),
