@@ -19,13 +19,33 @@ using Eigen::MatrixXcd;
 using Eigen::VectorXcd;
 using Eigen::VectorXd;
 
-/// Second derivatives of the natural cubic spline through (x, y), for several columns at once.
+/// Second derivative, at x[i0], of the cubic through four points.
+VectorXcd curvature_of_four(const VectorXd& x, const MatrixXcd& y, Index i0, Index step) {
+  const Index i1 = i0 + step;
+  const Index i2 = i1 + step;
+  const Index i3 = i2 + step;
+  const VectorXcd d01 = (y.col(i1) - y.col(i0)) / (x[i1] - x[i0]);
+  const VectorXcd d12 = (y.col(i2) - y.col(i1)) / (x[i2] - x[i1]);
+  const VectorXcd d23 = (y.col(i3) - y.col(i2)) / (x[i3] - x[i2]);
+  const VectorXcd d012 = (d12 - d01) / (x[i2] - x[i0]);
+  const VectorXcd d123 = (d23 - d12) / (x[i3] - x[i1]);
+  const VectorXcd d0123 = (d123 - d012) / (x[i3] - x[i0]);
+  return 2.0 * (d012 + d0123 * (2.0 * x[i0] - x[i1] - x[i2]));
+}
+
+/// Second derivatives of the cubic spline through (x, y), for several curves at once. At the ends
+/// they are those of the cubic through the last four points, which keeps fourth order up to there;
+/// with fewer points they are 0.
 ///
 /// Shape: x is (n), n >= 2; y is (m, n), one curve a row; the result has y's shape.
 MatrixXcd spline_curvature(const VectorXd& x, const MatrixXcd& y) {
   const Index n = x.size();
   MatrixXcd curvature = MatrixXcd::Zero(y.rows(), n);
   if (n < 3) return curvature;
+  if (n > 3) {
+    curvature.col(0) = curvature_of_four(x, y, 0, 1);
+    curvature.col(n - 1) = curvature_of_four(x, y, n - 1, -1);
+  }
   // Thomas algorithm on the inner points.
   VectorXd upper = VectorXd::Zero(n);
   for (Index i = 1; i + 1 < n; ++i) {
@@ -33,17 +53,18 @@ MatrixXcd spline_curvature(const VectorXd& x, const MatrixXcd& y) {
     const double right = x[i + 1] - x[i];
     const double pivot = 2.0 * (left + right) - left * upper[i - 1];
     upper[i] = right / pivot;
-    curvature.col(i) = (6.0 * ((y.col(i + 1) - y.col(i)) / right - (y.col(i) - y.col(i - 1)) / left) -
-                        left * curvature.col(i - 1)) /
-                       pivot;
+    curvature.col(i) =
+        (6.0 * ((y.col(i + 1) - y.col(i)) / right - (y.col(i) - y.col(i - 1)) / left) -
+         left * curvature.col(i - 1)) /
+        pivot;
   }
   for (Index i = n - 2; i >= 1; --i) curvature.col(i) -= upper[i] * curvature.col(i + 1);
   return curvature;
 }
 
-/// The delay that best explains the phase steps of all transmissions together: the lag of the
-/// strongest correlation of neighbouring points. Robust against zeros and noise.
-double mean_delay_s(const Network& network) {
+/// Phase lag per step and its weight, summed over the transmissions that `wanted` picks.
+template <class Wanted>
+double mean_delay_of(const Network& network, Wanted wanted) {
   const int n = network.num_ports();
   double turned = 0.0;
   double weight = 0.0;
@@ -51,7 +72,9 @@ double mean_delay_s(const Network& network) {
     Complex sum = 0.0;
     for (int to = 0; to < n; ++to) {
       for (int from = 0; from < n; ++from) {
-        if (to != from) sum += network.at(k)(to, from) * std::conj(network.at(k - 1)(to, from));
+        if (wanted(to, from)) {
+          sum += network.at(k)(to, from) * std::conj(network.at(k - 1)(to, from));
+        }
       }
     }
     const double step = network.frequencies_hz[k] - network.frequencies_hz[k - 1];
@@ -59,6 +82,15 @@ double mean_delay_s(const Network& network) {
     weight += std::abs(sum) * step * step;
   }
   return weight > 0.0 ? turned / (2.0 * std::numbers::pi * weight) : 0.0;
+}
+
+void check_termination(const Termination& termination) {
+  const Complex z = termination.impedance_ohm.value_or(Complex(termination.resistance_ohm));
+  if (!std::isfinite(z.real()) || !std::isfinite(z.imag()) || z.real() < 0.0 ||
+      !std::isfinite(termination.capacitance_f) || termination.capacitance_f < 0.0) {
+    throw std::invalid_argument(
+        "a termination must be finite, with resistance and capacitance >= 0");
+  }
 }
 
 /// Redheffer star product of two 2N-ports, inner references equal. Stays finite where nothing is
@@ -188,7 +220,7 @@ Network resampled(const Network& network, const VectorXd& frequencies_hz) {
       frequencies_hz[frequencies_hz.size() - 1] > x[x.size() - 1]) {
     throw std::invalid_argument("resampled: the new grid leaves the range of the old one");
   }
-  const double delay_s = mean_delay_s(network);
+  const double delay_s = mean_delay_of(network, [](int to, int from) { return to != from; });
   const auto turn = [&](double frequency_hz) {
     return std::polar(1.0, 2.0 * std::numbers::pi * frequency_hz * delay_s);
   };
@@ -265,10 +297,10 @@ Result<Network> cascade(const std::vector<Network>& networks, std::string_view l
     joined = joined ? cascade_of_two(*joined, std::move(brought)) : std::move(brought);
   }
   result.value = std::move(joined);
-  result.notes.push_back(warning_at(
-      std::string(label), 0,
-      "the frequency grids differ; all were interpolated onto " + std::to_string(count) +
-          " points from " + range_text(grid[0], grid[count - 1])));
+  result.notes.push_back(warning_at(std::string(label), 0,
+                                    "the frequency grids differ; all were interpolated onto " +
+                                        std::to_string(count) + " points from " +
+                                        range_text(grid[0], grid[count - 1])));
   return result;
 }
 
@@ -278,20 +310,48 @@ Complex Termination::at(double frequency_hz) const {
   return z / (1.0 + Complex(0.0, 2.0 * std::numbers::pi * frequency_hz * capacitance_f) * z);
 }
 
+double mean_delay_s(const Network& network, int to, int from) {
+  return mean_delay_of(network, [=](int i, int j) { return i == to && j == from; });
+}
+
+Network with_port_ended(const Network& network, int port, const Termination& termination) {
+  const int n = network.num_ports();
+  if (port < 1 || port > n) {
+    throw std::out_of_range("with_port_ended: port " + std::to_string(port) + " of " +
+                            std::to_string(n));
+  }
+  check_termination(termination);
+  std::vector<int> others;
+  for (int i = 1; i <= n; ++i) {
+    if (i != port) others.push_back(i);
+  }
+  Network result = with_ports(network, others);
+  const Index p = port - 1;
+  const Complex z = network.reference_ohm[p];
+  for (Index k = 0; k < network.num_points(); ++k) {
+    const Complex ends = termination.at(network.frequencies_hz[k]);
+    const Complex reflection = (ends - z) / (ends + std::conj(z));
+    const auto s = network.at(k);
+    auto left = result.at(k);
+    const Complex loop = reflection / (1.0 - reflection * s(p, p));
+    for (Index j = 0; j + 1 < n; ++j) {
+      for (Index i = 0; i + 1 < n; ++i) {
+        left(i, j) += s(others[static_cast<std::size_t>(i)] - 1, p) * loop *
+                      s(p, others[static_cast<std::size_t>(j)] - 1);
+      }
+    }
+  }
+  return result;
+}
+
 FrequencyResponse terminated_response(const Network& two_port, const Termination& source,
                                       const Termination& load) {
   if (two_port.num_ports() != 2) {
     throw std::invalid_argument("terminated_response: found " +
                                 std::to_string(two_port.num_ports()) + " ports, wanted 2");
   }
-  for (const Termination* termination : {&source, &load}) {
-    const Complex z = termination->impedance_ohm.value_or(Complex(termination->resistance_ohm));
-    if (!std::isfinite(z.real()) || !std::isfinite(z.imag()) || z.real() < 0.0 ||
-        !std::isfinite(termination->capacitance_f) || termination->capacitance_f < 0.0) {
-      throw std::invalid_argument(
-          "terminated_response: a termination must be finite, with resistance and capacitance >= 0");
-    }
-  }
+  check_termination(source);
+  check_termination(load);
   const bool real = (two_port.reference_ohm.imag().array() == 0.0).all();
   const Network network =
       real ? two_port : renormalised(two_port, two_port.reference_ohm.real().cast<Complex>());
@@ -306,13 +366,13 @@ FrequencyResponse terminated_response(const Network& two_port, const Termination
     const Complex zl = load.at(f);
     const Complex g1 = (zs - z1) / (zs + z1);
     const Complex g2 = (zl - z2) / (zl + z2);
-    const Complex denominator = 1.0 - s(0, 0) * g1 - s(1, 1) * g2 +
-                                g1 * g2 * (s(0, 0) * s(1, 1) - s(0, 1) * s(1, 0));
+    const Complex denominator =
+        1.0 - s(0, 0) * g1 - s(1, 1) * g2 + g1 * g2 * (s(0, 0) * s(1, 1) - s(0, 1) * s(1, 0));
     // The source's capacitance also divides what its resistance passes: the voltage that it would
     // show open is smaller than that of its generator.
     const Complex generator_ohm = source.impedance_ohm.value_or(Complex(source.resistance_ohm));
-    const Complex divider = source.capacitance_f == 0.0 || generator_ohm == 0.0 ? 1.0
-                                                                                : zs / generator_ohm;
+    const Complex divider =
+        source.capacitance_f == 0.0 || generator_ohm == 0.0 ? 1.0 : zs / generator_ohm;
     response.values[k] = scale * divider * s(1, 0) * (1.0 - g1) * (1.0 + g2) / denominator;
   }
   return response;

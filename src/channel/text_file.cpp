@@ -70,7 +70,8 @@ Result<TextFile> read_text_file(const std::string& path, std::size_t max_bytes) 
       result.text.resize(std::min(std::max(result.text.capacity(), filled + kChunk),
                                   std::max(max_bytes + 1, filled + 1)));
     }
-    const ssize_t got = ::read(file.get(), result.text.data() + filled, result.text.size() - filled);
+    const ssize_t got =
+        ::read(file.get(), result.text.data() + filled, result.text.size() - filled);
     if (got < 0 && errno == EINTR) continue;
     if (got < 0) return fail("can't be read: " + reason(errno));
     if (got == 0) break;

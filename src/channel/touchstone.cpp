@@ -115,12 +115,20 @@ struct Mode {
   int second = 0;   ///< 0 for S
 };
 
-const std::vector<std::string> kKeywords = {
-    "[version]",          "[number of ports]",           "[two-port data order]",
-    "[two-port order]",   "[number of frequencies]",     "[number of noise frequencies]",
-    "[reference]",        "[matrix format]",             "[mixed-mode order]",
-    "[network data]",     "[noise data]",                "[end]",
-    "[begin information]", "[end information]"};
+const std::vector<std::string> kKeywords = {"[version]",
+                                            "[number of ports]",
+                                            "[two-port data order]",
+                                            "[two-port order]",
+                                            "[number of frequencies]",
+                                            "[number of noise frequencies]",
+                                            "[reference]",
+                                            "[matrix format]",
+                                            "[mixed-mode order]",
+                                            "[network data]",
+                                            "[noise data]",
+                                            "[end]",
+                                            "[begin information]",
+                                            "[end information]"};
 
 class Reader {
  public:
@@ -221,7 +229,8 @@ class Reader {
       if (wanted_modes_ > 0) return mode_names(line);
       if (version_ == 2) {
         if (!complained_of_stray_data_) {
-          error(line_, "found " + shown_text(line, 30) + " before [Network Data]; wanted a keyword");
+          error(line_,
+                "found " + shown_text(line, 30) + " before [Network Data]; wanted a keyword");
         }
         complained_of_stray_data_ = true;
         return;
@@ -413,8 +422,8 @@ class Reader {
         error(line_, "found reference " + shown_text(word) + "; wanted a resistance > 0 in ohm");
       }
       if (wanted_references_ == 0) {
-        error(line_, "found more than " + number_list("reference", num_ports_) +
-                         "; wanted one a port");
+        error(line_,
+              "found more than " + number_list("reference", num_ports_) + "; wanted one a port");
         return;
       }
       references_.push_back(ohm && *ohm > 0 ? *ohm : 50.0);
@@ -425,8 +434,7 @@ class Reader {
   void mode_names(std::string_view line) {
     for (std::string_view word = next_word(line); !word.empty(); word = next_word(line)) {
       if (wanted_modes_ == 0) {
-        error(line_, "found more than " + number_list("mode", num_ports_) +
-                         "; wanted one a port");
+        error(line_, "found more than " + number_list("mode", num_ports_) + "; wanted one a port");
         return;
       }
       --wanted_modes_;
@@ -435,16 +443,15 @@ class Reader {
       const std::string_view ports = std::string_view(upper_case).substr(1);
       const std::size_t comma = ports.find(',');
       const auto first = parse_integer(ports.substr(0, comma));
-      const auto second = comma == std::string_view::npos
-                              ? std::optional<long long>(0)
-                              : parse_integer(ports.substr(comma + 1));
+      const auto second = comma == std::string_view::npos ? std::optional<long long>(0)
+                                                          : parse_integer(ports.substr(comma + 1));
       const bool pair = kind == 'D' || kind == 'C';
       const auto in_range = [&](long long p) { return p >= 1 && p <= num_ports_; };
       if ((!pair && kind != 'S') || !first || !second || !in_range(*first) ||
           (pair != (comma != std::string_view::npos)) ||
           (pair && (!in_range(*second) || *second == *first))) {
-        error(line_, "found mode " + shown_text(word) + "; wanted S1, D1,2 or C1,2 with ports 1 to " +
-                         std::to_string(num_ports_));
+        error(line_, "found mode " + shown_text(word) +
+                         "; wanted S1, D1,2 or C1,2 with ports 1 to " + std::to_string(num_ports_));
         continue;
       }
       modes_.push_back({kind, static_cast<int>(*first), static_cast<int>(*second)});
@@ -681,8 +688,8 @@ class Reader {
   [[nodiscard]] std::string needs() const {
     const std::string ports = std::to_string(num_ports_);
     const Index pairs = static_cast<Index>(offsets_.size());
-    return "a " + ports + "-port point needs " + std::to_string(needed_) +
-           " (1 frequency + 2 x " + std::to_string(pairs) + ")";
+    return "a " + ports + "-port point needs " + std::to_string(needed_) + " (1 frequency + 2 x " +
+           std::to_string(pairs) + ")";
   }
 
   /// A hint when the first point looks like that of another number of ports; ends the reading,
@@ -696,8 +703,8 @@ class Reader {
   }
 
   void incomplete() {
-    error(point_line_, "found " + number_list("number", got_) + "; " + needs() +
-                           other_port_count(got_));
+    error(point_line_,
+          "found " + number_list("number", got_) + "; " + needs() + other_port_count(got_));
     got_ = 0;
   }
 
@@ -736,8 +743,8 @@ class Reader {
     if (!numbers(line)) return;
     const auto count = static_cast<Index>(row_.size());
     if (count != 5) {
-      error(line_, "found " + number_list("number", count) +
-                       "; a line of noise parameters needs 5");
+      error(line_,
+            "found " + number_list("number", count) + "; a line of noise parameters needs 5");
       return;
     }
     if (num_noise_ > 0 && row_[0] <= last_noise_frequency_) {

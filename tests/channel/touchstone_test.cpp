@@ -7,6 +7,7 @@
 #include <sstream>
 
 #include "support/input_files.hpp"
+#include "support/measured_data.hpp"
 
 namespace tapwright {
 namespace {
@@ -80,9 +81,10 @@ TEST_P(TouchstoneDialect, ReadsAsExpected) {
   }
 }
 
-INSTANTIATE_TEST_SUITE_P(Files, TouchstoneDialect,
-                         testing::ValuesIn(test::files_with_expectation("tests/channel/touchstone")),
-                         [](const auto& file) { return test::test_name_of(file.param); });
+INSTANTIATE_TEST_SUITE_P(
+    Files, TouchstoneDialect,
+    testing::ValuesIn(test::files_with_expectation("tests/channel/touchstone")),
+    [](const auto& file) { return test::test_name_of(file.param); });
 
 class BadTouchstone : public testing::TestWithParam<std::string> {};
 
@@ -122,8 +124,8 @@ void expect_same_bits(const Network& a, const Network& b) {
 TEST(Touchstone, ReadsBackBitForBitWhatItWroteForAnyPortCountAndUnit) {
   std::mt19937_64 generator(1);
   for (const int ports : {1, 2, 3, 4, 5, 8, 12, 32}) {
-    for (const auto unit : {Options::Unit::kHz, Options::Unit::kKhz, Options::Unit::kMhz,
-                            Options::Unit::kGhz}) {
+    for (const auto unit :
+         {Options::Unit::kHz, Options::Unit::kKhz, Options::Unit::kMhz, Options::Unit::kGhz}) {
       for (const int version : {1, 2}) {
         const Network network = random_network(ports, 7, generator);
         Options options;
@@ -176,14 +178,15 @@ TEST(Touchstone, TakesTheNumberOfPortsFromTheNameInEitherCase) {
   EXPECT_EQ(ports_from_file_name("a/b.s2p"), 2);
   EXPECT_EQ(ports_from_file_name("B.S32P"), 32);
   EXPECT_EQ(ports_from_file_name("x.y.s4p"), 4);
-  for (const char* name : {"a", "a.sp", "a.s0p", "a.s2", "a.s2px", "a.sxp", "s2p", "a.s-2p", "a.ts"}) {
+  for (const char* name :
+       {"a", "a.sp", "a.s0p", "a.s2", "a.s2px", "a.sxp", "s2p", "a.s-2p", "a.ts"}) {
     EXPECT_EQ(ports_from_file_name(name), std::nullopt) << name;
   }
 }
 
 TEST(Touchstone, ReadsTheMeasuredFiles) {
-  const auto path = test::outside_file("microstrip_100mm.s2p");
-  if (!path) GTEST_SKIP() << "measured files are not here";
+  const auto path = test::measured_file("microstrip_100mm.s2p");
+  if (!path) GTEST_SKIP() << test::kNoMeasuredFiles;
   const auto result = parse_touchstone(test::bytes_of(*path), *path);
   ASSERT_TRUE(result) << notes_text(result.notes);
   EXPECT_TRUE(result.notes.empty());
@@ -193,12 +196,13 @@ TEST(Touchstone, ReadsTheMeasuredFiles) {
   // As they stand in the file's first line of data.
   EXPECT_EQ(result.value->at(0)(1, 0), Complex(0.9958727, -0.0050460));
   EXPECT_EQ(result.value->at(0)(0, 1), Complex(1.0018340, -0.0025891));
-  const auto pair = test::outside_file("coupled_pair_through.s4p");
+  const auto pair = test::measured_file("coupled_pair_through.s4p");
   ASSERT_TRUE(pair);
   const auto four = parse_touchstone(test::bytes_of(*pair), *pair);
   ASSERT_TRUE(four) << notes_text(four.notes);
   EXPECT_EQ(four.value->num_points(), 1000);
-  EXPECT_EQ(four.value->at(0)(2, 0), Complex(9.99174531298837598214e-001, -2.35022067247729546380e-002));
+  EXPECT_EQ(four.value->at(0)(2, 0),
+            Complex(9.99174531298837598214e-001, -2.35022067247729546380e-002));
 }
 
 }  // namespace

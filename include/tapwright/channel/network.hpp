@@ -35,10 +35,10 @@ struct Network {
 /// A network of the given grid and equal references with S = 0 everywhere.
 [[nodiscard]] inline Network empty_network(const Eigen::VectorXd& frequencies_hz,
                                            const Eigen::VectorXcd& reference_ohm) {
-  return {frequencies_hz,
-          Eigen::MatrixXcd::Zero(reference_ohm.size() * reference_ohm.size(),
-                                 frequencies_hz.size()),
-          reference_ohm};
+  return {
+      frequencies_hz,
+      Eigen::MatrixXcd::Zero(reference_ohm.size() * reference_ohm.size(), frequencies_hz.size()),
+      reference_ohm};
 }
 
 }  // namespace tapwright

@@ -34,8 +34,8 @@ namespace tapwright {
 [[nodiscard]] Result<Network> cascade(const std::vector<Network>& networks, std::string_view label);
 
 /// The network on another grid within its own range. The mean delay is taken out of every
-/// parameter, the rest interpolated by a natural cubic spline in real and imaginary part, and the
-/// delay put back; so many turns of phase between points of a smooth response are no obstacle.
+/// parameter, the rest interpolated by a cubic spline in real and imaginary part, and the delay put
+/// back; so anything under half a turn of phase between points is no obstacle.
 ///
 /// Errors: std::invalid_argument when the new grid leaves the old range.
 [[nodiscard]] Network resampled(const Network& network, const Eigen::VectorXd& frequencies_hz);
@@ -50,13 +50,25 @@ struct Termination {
   [[nodiscard]] std::complex<double> at(double frequency_hz) const;
 };
 
+/// The network without the given port (1-based), which ends in the termination.
+///
+/// Errors: std::out_of_range for a port the network lacks, std::invalid_argument for a termination
+///         that is no finite number or has a negative real part.
+[[nodiscard]] Network with_port_ended(const Network& network, int port,
+                                      const Termination& termination);
+
+/// Mean delay of a transmission in seconds, from the phase steps between neighbouring points, each
+/// weighted by the power it carries; right while a step turns less than half a turn. Ports count
+/// from 0.
+[[nodiscard]] double mean_delay_s(const Network& network, int to, int from);
+
 /// Voltage across the load over half the voltage of the source's generator:
 ///
 ///     H = D s21 (1 - G1)(1 + G2) / (1 - s11 G1 - s22 G2 + G1 G2 (s11 s22 - s12 s21))
 ///
 /// G1, G2 the source's and the load's reflection seen from the port's reference, times
-/// sqrt(z2 / z1) where the references differ. D = 1 / (1 + j w R C) is the source's own divider, its
-/// capacitance C standing behind its resistance (or impedance) R; 1 without capacitance.
+/// sqrt(z2 / z1) where the references differ. D = 1 / (1 + j w R C) is the source's own divider,
+/// its capacitance C standing behind its resistance (or impedance) R; 1 without capacitance.
 ///
 /// Shape:  two_port has two ports.
 /// Errors: std::invalid_argument otherwise, or if a termination is no finite number or has a

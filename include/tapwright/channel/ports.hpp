@@ -44,4 +44,35 @@ struct PortMap {
 [[nodiscard]] Result<Network> mixed_mode(const Network& network, const PortMap& map,
                                          std::string_view label);
 
+/// A line of a multi-port file: its near port and its far one, 1-based.
+struct Line {
+  int near = 0;
+  int far = 0;
+  friend bool operator==(const Line&, const Line&) = default;
+};
+
+/// Which port is the far end of which: the partner that gets most of the energy per octave sent
+/// into a port. Port 1 is taken as near; another line's near port is the one that hears port 1
+/// before its signal can have run down the line, or the lower one where that can't be told.
+/// Ascending by near port.
+///
+/// Errors: an odd number of ports, or partners that do not agree with each other.
+[[nodiscard]] Result<std::vector<Line>> find_lines(const Network& network, std::string_view label);
+
+/// The port maps that the data suggest, one a lane. Two ports: from 1 to 2. Four or more:
+/// differential lanes, each of the two lines with the strongest coupling between them, the line of
+/// the lower near port as +; where no line couples to another, in ascending order. A warning says
+/// what was taken; there is none for two ports, whose order is the format's own.
+///
+/// Errors: those of find_lines; a number of lines that is odd and not 1.
+[[nodiscard]] Result<std::vector<PortMap>> guess_ports(const Network& network,
+                                                       std::string_view label);
+
+/// A warning when the path turns the signal's sign, as it does when + and - of one side are
+/// swapped: its phase, followed down to DC, comes nearer to half a turn than to none. Not for
+/// crosstalk, whose sign is free.
+///
+/// Shape: path has two ports.
+[[nodiscard]] std::vector<Diagnostic> check_polarity(const Network& path, std::string_view label);
+
 }  // namespace tapwright
