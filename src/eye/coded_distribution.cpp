@@ -550,6 +550,65 @@ double exceedance(const LineCode& code, const CodedDisturbance& disturbance, dou
   return fallback_grid(code, disturbance, spread.deviation_v).exceedance(level_v);
 }
 
+CodedMoments coded_moments(const LineCode& code, const Eigen::VectorXd& row,
+                           Eigen::Index main_index) {
+  check({row, main_index, {}});
+  const Eigen::Index n = row.size();
+  const Eigen::Index pad = code.max_symbols();
+  const Eigen::Index main_in_order = n - 1 - main_index;
+  Eigen::VectorXd weight = Eigen::VectorXd::Zero(n + 2 * pad);
+  weight.segment(pad, n) = row.reverse();
+  weight[pad + main_in_order] = 0.0;
+  // Of the paths into a state: their probability, and the sums of X and X^2 weighted with it.
+  struct State {
+    double probability = 0.0;
+    double first = 0.0;
+    double second = 0.0;
+  };
+  State total;
+  std::vector<State> state;
+  std::vector<State> next;
+  Eigen::VectorXd sums;
+  for (const Path& path : paths_of(code, n, main_in_order)) {
+    if (path.upward) continue;  // the main symbol is free: one direction says all
+    state.clear();
+    for (const double p : code.state_probability(path.blocks.front().section)) {
+      state.push_back({p, 0.0, 0.0});
+    }
+    for (const Block& block : path.blocks) {
+      const LineCode::Section& section = code.sections()[block.section];
+      sums.noalias() =
+          section.words.transpose() * weight.segment(pad + block.at, section.num_symbols());
+      next.assign(static_cast<std::size_t>(section.num_to), {});
+      for (const LineCode::Branch& branch : section.branches) {
+        double probability = 0.0;
+        double first = 0.0;
+        double second = 0.0;
+        for (int w = branch.first; w < branch.last; ++w) {
+          const double p = section.probability[static_cast<std::size_t>(w)];
+          probability += p;
+          first += p * sums[w];
+          second += p * sums[w] * sums[w];
+        }
+        const State& from = state[static_cast<std::size_t>(branch.from)];
+        State& to = next[static_cast<std::size_t>(branch.to)];
+        to.probability += from.probability * probability;
+        to.first += from.first * probability + from.probability * first;
+        to.second +=
+            from.second * probability + 2.0 * from.first * first + from.probability * second;
+      }
+      std::swap(state, next);
+    }
+    for (const State& s : state) {
+      total.probability += s.probability;
+      total.first += s.first;
+      total.second += s.second;
+    }
+  }
+  const double mean = total.first / total.probability;
+  return {mean, std::sqrt(std::max(0.0, total.second / total.probability - mean * mean))};
+}
+
 // --- the grid
 // -------------------------------------------------------------------------------------
 

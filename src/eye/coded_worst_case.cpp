@@ -52,7 +52,6 @@ CodedIsi::CodedIsi(LineCode code, Eigen::Index num_cursors, std::optional<Eigen:
   sum_.resize(static_cast<std::size_t>(code_.max_keys()));
   value_.resize(states);
   next_.resize(states);
-  choice_.resize(static_cast<std::size_t>(num_cursors + 1) * states);
   cut_.signs.resize(num_cursors);
 }
 
@@ -183,6 +182,7 @@ const CodeCut& CodedIsi::cut(const Eigen::Ref<const Eigen::VectorXd>& row) {
       }
     }
   }
+  choice_.resize(static_cast<std::size_t>((num_cursors_ + 1) * code_.max_states()));
   load(row, direction);
   longest_path<true>(position, direction);
   return cut_;

@@ -39,6 +39,15 @@ struct CodedDisturbance {
 [[nodiscard]] double exceedance(const LineCode& code, const CodedDisturbance& disturbance,
                                 double level_v);
 
+/// Mean and standard deviation of a sum over a code's random data, exact but for rounding.
+struct CodedMoments {
+  double mean_v = 0.0;
+  double deviation_v = 0.0;
+};
+/// The sum over k != 0 of row_k a_{-k} whatever the main symbol is, over random data and positions.
+[[nodiscard]] CodedMoments coded_moments(const LineCode& code, const Eigen::VectorXd& row,
+                                         Eigen::Index main_index);
+
 /// The distribution on a grid, by shifting one array per state along the trellis. The reference:
 /// slower by far. Each word's sum and each of the others is split over the two nearest bins so that
 /// the mean stays; with B such splits, N errs by at most theta B step^2 / 8 to the safe side where

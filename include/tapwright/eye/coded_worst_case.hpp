@@ -22,7 +22,8 @@ struct CodeCut {
   double main_symbol = 1.0;  ///< the level it has in the sequence
 };
 
-/// Finds the worst case of many rows of one shape without allocating: for the inside of a search.
+/// Finds the worst case of many rows of one shape without allocating (but for the first `cut`): for
+/// the inside of a search.
 ///
 ///     max over sequences a, positions and directions of  -+ sum over k != 0 of row_k a_{-k}
 ///
