@@ -120,39 +120,28 @@ double exceeded_level_v(const Disturbance& disturbance, double probability) {
 
 ExceededLevel exceeded_level_with_gradient(const Disturbance& disturbance, double probability) {
   require_tail(probability);
-  ExceededLevel result;
-  result.by_symbols = Eigen::VectorXd::Zero(disturbance.symbols_v.size());
-  result.by_binary = Eigen::VectorXd::Zero(disturbance.binary_v.size());
   const Cumulant cumulant(disturbance);
-  const auto located = locate(cumulant, probability);
-  std::vector<double> amplitudes;
-  const int levels = disturbance.levels;
-  for (int weight = levels / 2; weight >= 1; weight /= 2) {
-    for (const double v : disturbance.symbols_v) amplitudes.push_back(v * weight / (levels - 1.0));
-  }
-  for (const double v : disturbance.binary_v) amplitudes.push_back(v);
+  const std::vector<double> amplitudes = binary_amplitudes(disturbance);
   std::vector<double> by_amplitude(amplitudes.size());
-  if (located) {
-    result.level_v = located->level_v;
-    located->contour.gradient(located->level_v, amplitudes, disturbance.sigma_v, by_amplitude,
-                              result.by_sigma);
+  double by_sigma = 0.0;
+  double level_v = 0.0;
+  if (const auto located = locate(cumulant, probability)) {
+    level_v = located->level_v;
+    located->contour.gradient(level_v, amplitudes, disturbance.sigma_v, by_amplitude, by_sigma);
   } else {
-    result.level_v = exceeded_level_v(disturbance, probability);
+    level_v = exceeded_level_v(disturbance, probability);
     // Too little noise for the contour: the mean of each sign under the tilt that has its mean at
     // the level, or the worst case's signs where there is no such tilt.
-    const auto theta =
-        result.level_v > 0.0 ? cumulant.theta_of_level(result.level_v) : std::nullopt;
+    const auto theta = level_v > 0.0 ? cumulant.theta_of_level(level_v) : std::nullopt;
     for (std::size_t k = 0; k < amplitudes.size(); ++k) {
       by_amplitude[k] = theta ? std::tanh(*theta * amplitudes[k])
                               : static_cast<double>((amplitudes[k] > 0.0) - (amplitudes[k] < 0.0));
     }
-    result.by_sigma = theta ? *theta * disturbance.sigma_v : 0.0;
+    by_sigma = theta ? *theta * disturbance.sigma_v : 0.0;
   }
-  std::size_t k = 0;
-  for (int weight = levels / 2; weight >= 1; weight /= 2) {
-    for (double& g : result.by_symbols) g += by_amplitude[k++] * weight / (levels - 1.0);
-  }
-  for (double& g : result.by_binary) g = by_amplitude[k++];
+  ExceededLevel result = gathered(disturbance, by_amplitude);
+  result.level_v = level_v;
+  result.by_sigma = by_sigma;
   return result;
 }
 

@@ -5,6 +5,7 @@
 #include <stdexcept>
 #include <string>
 
+#include "tapwright/eye/coded_distribution.hpp"
 #include "tapwright/eye/coded_worst_case.hpp"
 
 namespace tapwright {
@@ -96,8 +97,6 @@ Eigen::Index mask_reach(const EyeModel& model) {
       std::floor(model.link.mask_width_ui / 2.0 * model.input.samples_per_ui() + 1e-9));
 }
 
-namespace {
-
 Disturbance disturbance_of(const PlacedEye& eye, const Instant& instant,
                            const Eigen::VectorXd& aggressors_v) {
   const Link& link = eye.model->link;
@@ -113,21 +112,38 @@ Disturbance disturbance_of(const PlacedEye& eye, const Instant& instant,
   return d;
 }
 
+namespace {
+
 /// N(P), or P(X > x), of one instant.
 class Side {
  public:
-  Side(const PlacedEye& eye, const LineCode&, const Instant& instant,
+  Side(const PlacedEye& eye, const LineCode& code, const Instant& instant,
        const Eigen::VectorXd& aggressors_v)
-      : independent_(disturbance_of(eye, instant, aggressors_v)) {}
+      : code_(&code) {
+    if (code.independent()) {
+      all_ = disturbance_of(eye, instant, aggressors_v);
+      return;
+    }
+    coded_.row = instant.residual.values;
+    coded_.main_index = instant.residual.main_index;
+    // Without the cursors: what does not follow the code.
+    Instant others = instant;
+    others.residual = {Eigen::VectorXd::Zero(1), 0};
+    coded_.others = disturbance_of(eye, others, aggressors_v);
+  }
   [[nodiscard]] double level_v(double probability) const {
-    return exceeded_level_v(independent_, probability);
+    return code_->independent() ? exceeded_level_v(all_, probability)
+                                : exceeded_level_v(*code_, coded_, probability);
   }
   [[nodiscard]] double exceedance(double level_v) const {
-    return tapwright::exceedance(independent_, level_v);
+    return code_->independent() ? tapwright::exceedance(all_, level_v)
+                                : tapwright::exceedance(*code_, coded_, level_v);
   }
 
  private:
-  Disturbance independent_;
+  const LineCode* code_;
+  Disturbance all_;
+  CodedDisturbance coded_;
 };
 
 }  // namespace

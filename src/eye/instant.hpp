@@ -38,6 +38,12 @@ struct Instant {
 [[nodiscard]] Instant instant_of(const PlacedEye& eye, const CursorMap& map,
                                  const Eigen::VectorXd& fir, const Eigen::VectorXd& dfe_v);
 
+/// Everything at one instant but clock jitter, as independent terms. The symbols are, in this
+/// order: the cursors but the main one, DFE taps beyond the span, the aggressors; the binary terms
+/// are A_DD h_J,k.
+[[nodiscard]] Disturbance disturbance_of(const PlacedEye& eye, const Instant& instant,
+                                         const Eigen::VectorXd& aggressors_v);
+
 /// Aggressors' cursors at the phase of the largest variance, one after the other.
 [[nodiscard]] Eigen::VectorXd aggressors_at_error_ratio(const PlacedEye& eye,
                                                         const Eigen::VectorXd& fir);

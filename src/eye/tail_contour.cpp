@@ -19,6 +19,8 @@ constexpr double kC8 = -17.0 / 2520.0;
 constexpr double kC10 = 31.0 / 14175.0;
 constexpr double kNegligible = 1e-9;
 
+}  // namespace
+
 std::vector<double> binary_amplitudes(const Disturbance& disturbance) {
   std::vector<double> amplitudes;
   const int levels = disturbance.levels;
@@ -34,7 +36,17 @@ std::vector<double> binary_amplitudes(const Disturbance& disturbance) {
   return amplitudes;
 }
 
-}  // namespace
+ExceededLevel gathered(const Disturbance& disturbance, const std::vector<double>& by_amplitude) {
+  ExceededLevel level;
+  level.by_symbols = Eigen::VectorXd::Zero(disturbance.symbols_v.size());
+  level.by_binary = Eigen::VectorXd::Zero(disturbance.binary_v.size());
+  auto next = by_amplitude.begin();
+  for (int weight = disturbance.levels / 2; weight >= 1; weight /= 2) {
+    for (double& g : level.by_symbols) g += *next++ * weight / (disturbance.levels - 1.0);
+  }
+  for (double& g : level.by_binary) g = *next++;
+  return level;
+}
 
 Cumulant::Cumulant(std::vector<double> amplitudes_v, double sigma_v)
     : amplitudes_v_(std::move(amplitudes_v)), sigma_v_(sigma_v) {

@@ -10,10 +10,14 @@
 
 namespace tapwright {
 
-/// K(z) = sum ln cosh(z b_k) + sigma^2 z^2 / 2 of X = sum +-b_k + sigma Z.
-///
 /// An evenly spaced symbol of L = 2^n levels over [-1, 1] is a sum of n independent +-: weights
-/// 2^(n-1), ..., 2, 1 over L - 1. So +- is all there is.
+/// 2^(n-1), ..., 2, 1 over L - 1. So a disturbance is a list of +-, in a fixed order.
+[[nodiscard]] std::vector<double> binary_amplitudes(const Disturbance& disturbance);
+/// Derivatives by those amplitudes put back to the terms they came from; level and by_sigma are 0.
+[[nodiscard]] ExceededLevel gathered(const Disturbance& disturbance,
+                                     const std::vector<double>& by_amplitude);
+
+/// K(z) = sum ln cosh(z b_k) + sigma^2 z^2 / 2 of X = sum +-b_k + sigma Z.
 class Cumulant {
  public:
   Cumulant(std::vector<double> amplitudes_v, double sigma_v);
