@@ -1,0 +1,132 @@
+#include "search/fir_space.hpp"
+
+#include <algorithm>
+#include <cmath>
+#include <cstddef>
+
+namespace tapwright::search {
+namespace {
+
+// A real value may miss a limit by this much through rounding; keeps_limits works in steps of 1e-9.
+constexpr double kRounding = 1e-12;
+
+std::size_t at(int i) { return static_cast<std::size_t>(i); }
+
+/// Whether rounding to integer multiples of 1e-9, as keeps_limits does, leaves the value as it is.
+bool is_whole_nano(double value) {
+  const double nano = value * 1e9;
+  return std::abs(nano - std::round(nano)) < 1e-4;
+}
+
+}  // namespace
+
+FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>& fixed)
+    : limits_(limits),
+      main_index_(static_cast<int>(limits.main_index())),
+      is_fixed_(fixed.has_value()),
+      peak_limit_(limits.peak_limit) {
+  double slack = 0.0;
+  for (int i = 0; i < static_cast<int>(limits.taps.size()); ++i) {
+    const FirTap& tap = limits.taps[at(i)];
+    positions_.push_back(tap.position);
+    Knob knob{tap.min, tap.max, {}};
+    if (fixed) {
+      knob.lo = knob.hi = (*fixed)[i];
+      knob.values = {knob.lo};
+    } else if (tap.is_remainder) {
+      remainder_ = i;
+      continue;
+    } else {
+      for (const Code& code : tap.codes) {
+        if (i == main_index_ && limits.min_main && code.value < *limits.min_main - 0.5e-9) continue;
+        knob.values.push_back(code.value);
+        if (!is_whole_nano(code.value)) slack += 0.5e-9;
+      }
+      if (!knob.values.empty()) {
+        knob.lo = knob.values.front();
+        knob.hi = knob.values.back();
+      } else if (i == main_index_ && limits.min_main) {
+        knob.lo = std::max(knob.lo, *limits.min_main);
+      }
+    }
+    free_.push_back(i);
+    knobs_.push_back(std::move(knob));
+  }
+  if (slack > 0.0) peak_limit_ += 0.5e-9 * static_cast<double>(free_.size() + 1);
+}
+
+std::vector<Box> FirSpace::roots(const std::vector<Knob>& all_knobs) const {
+  std::vector<Box> boxes{Box::whole(all_knobs)};
+  if (remainder_ < 0) return boxes;
+  for (int i = 0; i < num_free(); ++i) {
+    const Knob& knob = all_knobs[at(i)];
+    if (knob.lo >= 0.0 || knob.hi <= 0.0) continue;
+    const std::size_t before = boxes.size();
+    for (std::size_t b = 0; b < before; ++b) {
+      Box upper = boxes[b];
+      if (knob.values.empty()) {
+        boxes[b].hi[at(i)] = 0.0;
+        upper.lo[at(i)] = 0.0;
+      } else {
+        const int first_positive = static_cast<int>(
+            std::upper_bound(knob.values.begin(), knob.values.end(), 0.0) - knob.values.begin());
+        const int last = static_cast<int>(knob.values.size()) - 1;
+        boxes[b].set_codes(all_knobs, at(i), 0, first_positive - 1);
+        upper.set_codes(all_knobs, at(i), first_positive, last);
+      }
+      boxes.push_back(std::move(upper));
+    }
+  }
+  return boxes;
+}
+
+void FirSpace::expand(std::span<const double> x, std::span<double> taps) const {
+  double sum = 0.0;
+  for (int i = 0; i < num_free(); ++i) {
+    taps[at(free_[at(i)])] = x[at(i)];
+    sum += std::abs(x[at(i)]);
+  }
+  if (remainder_ >= 0) taps[at(remainder_)] = limits_.peak_limit - sum;
+}
+
+double FirSpace::reduce(const Box& box, std::span<const double> by_taps,
+                        std::span<double> by_free) const {
+  const double by_remainder = remainder_ >= 0 ? by_taps[at(remainder_)] : 0.0;
+  for (int i = 0; i < num_free(); ++i) {
+    const double sign = box.lo[at(i)] >= 0.0 ? 1.0 : -1.0;
+    by_free[at(i)] = by_taps[at(free_[at(i)])] - sign * by_remainder;
+  }
+  return by_remainder * limits_.peak_limit;
+}
+
+void FirSpace::add_rows(const Box& box, CuttingPlanes& planes) const {
+  if (remainder_ < 0) return;
+  const FirTap& tap = limits_.taps[at(remainder_)];
+  double least = tap.min;
+  if (remainder_ == main_index_ && limits_.min_main) least = std::max(least, *limits_.min_main);
+  std::vector<double> g(at(planes.dim()), 0.0);
+  for (int i = 0; i < num_free(); ++i) g[at(i)] = box.lo[at(i)] >= 0.0 ? 1.0 : -1.0;
+  planes.add_row(g, peak_limit_ - least + 0.5e-9);
+  for (double& value : g) value = -value;
+  planes.add_row(g, tap.max - peak_limit_ + 0.5e-9);
+}
+
+bool FirSpace::separate(std::span<const double> x, CuttingPlanes& planes) const {
+  if (remainder_ >= 0 || is_fixed_) return false;
+  double sum = 0.0;
+  for (int i = 0; i < num_free(); ++i) sum += std::abs(x[at(i)]);
+  if (sum <= peak_limit_ + kRounding) return false;
+  std::vector<double> g(at(planes.dim()), 0.0);
+  for (int i = 0; i < num_free(); ++i) g[at(i)] = x[at(i)] < 0.0 ? -1.0 : 1.0;
+  planes.add_row(g, peak_limit_);
+  return true;
+}
+
+bool FirSpace::allowed(std::span<const double> taps) const {
+  if (is_fixed_) return true;
+  const Eigen::Map<const Eigen::VectorXd> values(taps.data(),
+                                                 static_cast<Eigen::Index>(taps.size()));
+  return keeps_limits(limits_, values);
+}
+
+}  // namespace tapwright::search

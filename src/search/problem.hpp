@@ -1,0 +1,61 @@
+#pragma once
+// What branch and bound sees of a link: knobs, and a concave function of them.
+
+#include <cstdint>
+#include <limits>
+#include <span>
+#include <vector>
+
+#include "search/cutting_planes.hpp"
+
+namespace tapwright::search {
+
+constexpr double kImpossible = -std::numeric_limits<double>::infinity();
+
+/// One variable: real in [lo, hi], or one of the values.
+struct Knob {
+  double lo = 0.0;
+  double hi = 0.0;
+  std::vector<double> values;  ///< ascending; empty = real
+};
+
+/// A range of every knob: indices into Knob::values where there are any, real limits else.
+struct Box {
+  std::vector<int> first, last;
+  std::vector<double> lo, hi;
+
+  [[nodiscard]] static Box whole(const std::vector<Knob>& knobs);
+  void set_codes(const std::vector<Knob>& knobs, std::size_t knob, int first_code, int last_code);
+  /// Number of settings, or -1 when a knob is real.
+  [[nodiscard]] double num_settings(const std::vector<Knob>& knobs) const;
+};
+
+/// A concave function of the knobs, cut by cut, and what single settings are worth. Heights are eye
+/// heights in volts.
+class Problem {
+ public:
+  virtual ~Problem() = default;
+  [[nodiscard]] virtual const std::vector<Knob>& knobs() const = 0;
+  /// The boxes that cover every setting; more than one where a box must not straddle zero.
+  [[nodiscard]] virtual std::vector<Box> roots() const { return {Box::whole(knobs())}; }
+  /// Rows that hold in the whole box, added after CuttingPlanes::clear().
+  virtual void add_rows(const Box&, CuttingPlanes&) {}
+  /// height(y) <= a y + b for every y of the box. Returns b.
+  virtual double cut(const Box& box, std::span<const double> x, std::span<double> a) = 0;
+  /// Adds the rows or sharpens the cuts that x still violates; false if there are none. `thorough`
+  /// is asked for when everything cheap has converged.
+  virtual bool separate(const Box&, std::span<const double>, CuttingPlanes&, bool /*thorough*/) {
+    return false;
+  }
+  /// Height of one setting; kImpossible if the limits forbid it.
+  virtual double exact(std::span<const double> x) = 0;
+  /// Second key among equal heights: smaller is better (math.md section 4: larger ratio).
+  virtual double signal(std::span<const double> x) = 0;
+  /// Single settings are worth what the cuts say: no rounding of other knobs, no sampling rule.
+  [[nodiscard]] virtual bool exact_is_concave() const { return true; }
+};
+
+/// Heights are compared in steps of 1e-12 V, so that rounding doesn't decide between equals.
+[[nodiscard]] std::int64_t height_key(double height_v);
+
+}  // namespace tapwright::search
