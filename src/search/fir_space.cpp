@@ -42,6 +42,8 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
         knob.values.push_back(code.value);
         if (!is_whole_nano(code.value)) slack += 0.5e-9;
       }
+      if (knob.values.empty() && !tap.codes.empty()) is_empty_ = true;
+      row_slack_ = tap.codes.empty() ? row_slack_ : 0.5e-9;
       if (!knob.values.empty()) {
         knob.lo = knob.values.front();
         knob.hi = knob.values.back();
@@ -52,10 +54,12 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
     free_.push_back(i);
     knobs_.push_back(std::move(knob));
   }
+  if (fixed) peak_limit_ = std::max(peak_limit_, fixed->lpNorm<1>());
   if (slack > 0.0) peak_limit_ += 0.5e-9 * static_cast<double>(free_.size() + 1);
 }
 
 std::vector<Box> FirSpace::roots(const std::vector<Knob>& all_knobs) const {
+  if (is_empty_) return {};
   std::vector<Box> boxes{Box::whole(all_knobs)};
   if (remainder_ < 0) return boxes;
   for (int i = 0; i < num_free(); ++i) {
@@ -106,9 +110,9 @@ void FirSpace::add_rows(const Box& box, CuttingPlanes& planes) const {
   if (remainder_ == main_index_ && limits_.min_main) least = std::max(least, *limits_.min_main);
   std::vector<double> g(at(planes.dim()), 0.0);
   for (int i = 0; i < num_free(); ++i) g[at(i)] = box.lo[at(i)] >= 0.0 ? 1.0 : -1.0;
-  planes.add_row(g, peak_limit_ - least + 0.5e-9);
+  planes.add_row(g, peak_limit_ - least + row_slack_);
   for (double& value : g) value = -value;
-  planes.add_row(g, tap.max - peak_limit_ + 0.5e-9);
+  planes.add_row(g, tap.max - peak_limit_ + row_slack_);
 }
 
 bool FirSpace::separate(std::span<const double> x, CuttingPlanes& planes) const {

@@ -22,6 +22,8 @@ class FirSpace {
   [[nodiscard]] const std::vector<int>& positions() const { return positions_; }
   [[nodiscard]] int num_taps() const { return static_cast<int>(positions_.size()); }
   [[nodiscard]] int num_free() const { return static_cast<int>(knobs_.size()); }
+  /// No setting has a larger sum |c_i|.
+  [[nodiscard]] double peak_limit() const { return peak_limit_; }
   [[nodiscard]] int main_index() const { return main_index_; }
   /// `whole` with the FIR knobs (its first num_free) cut so that no box straddles zero where the
   /// remainder's sum |others| needs that.
@@ -44,6 +46,8 @@ class FirSpace {
   int main_index_ = 0;
   int remainder_ = -1;
   bool is_fixed_ = false;
+  bool is_empty_ = false;    ///< the least main tap leaves no code
+  double row_slack_ = 0.0;   ///< keeps_limits rounds to 1e-9
   double peak_limit_ = 1.0;  ///< of the bound: no setting that keeps_limits accepts is above it
 };
 

@@ -47,8 +47,9 @@ class Problem {
   virtual bool separate(const Box&, std::span<const double>, CuttingPlanes&, bool /*thorough*/) {
     return false;
   }
-  /// Height of one setting; kImpossible if the limits forbid it.
-  virtual double exact(std::span<const double> x) = 0;
+  /// Height of one setting; kImpossible if the limits forbid it. Below `worth` any value below it
+  /// will do, so that costly limits need no look.
+  virtual double exact(std::span<const double> x, double worth) = 0;
   /// Second key among equal heights: smaller is better (math.md section 4: larger ratio).
   virtual double signal(std::span<const double> x) = 0;
   /// Single settings are worth what the cuts say: no rounding of other knobs, no sampling rule.
