@@ -7,6 +7,7 @@
 
 #include "tapwright/base/normal.hpp"
 #include "tapwright/base/units.hpp"
+#include "tapwright/eye/sampling.hpp"
 
 namespace tapwright::search {
 namespace {
@@ -60,6 +61,7 @@ WorstCaseState::WorstCaseState(const EyeModel& model, const FirSpace& space,
   const Link& link = model.link;
   const Device& device = link.device;
   const double amplitude_v = device.transmitter.swings[swing_index].value;
+  peak_index_ = model.states[ctle_index].peak_index();
   eye_.model = &model;
   eye_.place = {swing_index, ctle_index, 0};
   eye_.amplitude_v = amplitude_v;
@@ -85,6 +87,7 @@ WorstCaseState::WorstCaseState(const EyeModel& model, const FirSpace& space,
     random_factor_ = link.jitter.random_ui * std::sqrt(symbol_variance(link.signal.levels));
   }
   sensitivity_v_ = device.receiver.sensitivity_v / amplitude_v;
+  rule_ = link.sampling;
   has_crosstalk_ = !link.crosstalk.empty();
   if (device.receiver.peak_input_v) input_limit_v_ = *device.receiver.peak_input_v / amplitude_v;
   const bool can_bind = device.receiver.peak_input_v && input != nullptr &&
@@ -107,7 +110,7 @@ void WorstCaseCell::move_to(Eigen::Index phase_samples) {
   const int pre = model.span_ui[0];
   const int post = model.span_ui[1];
   const int count = (pre + post + 1 + last - first + 3) / 4 * 4;
-  const Eigen::Index sample = model.states[state_->eye_.place.ctle_index].peak_index() + phase_samples;
+  const Eigen::Index sample = state_->peak_index_ + phase_samples;
   // Entry `last` of the buffer is output cursor -pre + first; cursor -pre of the pulse stands at
   // last - first.
   buffer_.assign(at(last - first + count), 0.0);
@@ -291,6 +294,11 @@ double WorstCaseCell::exact(std::span<const double> x, double worth) {
   if (state_->input_ != nullptr &&
       state_->input_->peak(taps_, by_taps_) > state_->input_limit_v_ * (1.0 + 1e-12) + kRounding) {
     return kImpossible;
+  }
+  // The sampling rule places this setting somewhere else: its worth is that cell's business.
+  if (state_->rule_ != SamplingRule::kBest && state_->scale_ * half >= worth) {
+    const SamplingInstant instant = sampling_instant(*state_->model_, settings(x), state_->rule_);
+    if (instant.rule_held && instant.phase_samples != phase_samples_) return kImpossible;
   }
   return state_->scale_ * half;
 }

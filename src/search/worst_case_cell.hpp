@@ -58,6 +58,7 @@ class WorstCaseState {
   const InputLimit* input_;  ///< null when the limit can't bind
   PlacedEye eye_;            ///< without cursors: for crosstalk
   std::shared_ptr<const StateRows> rows_;
+  Eigen::Index peak_index_ = 0;
   double share_ = 1.0;  ///< R/(L-1)
   double scale_ = 1.0;  ///< eye height in volts per volt of half eye at 1 V launch
   std::vector<Dfe> dfe_;
@@ -70,6 +71,7 @@ class WorstCaseState {
   double sensitivity_v_ = 0.0;       ///< at 1 V launch
   double input_limit_v_ = 0.0;       ///< at 1 V launch
   bool has_crosstalk_ = false;
+  SamplingRule rule_ = SamplingRule::kBest;
 };
 
 /// Moves over the sampling instants of one state. Keeps scratch space, so one a thread.
@@ -90,7 +92,9 @@ class WorstCaseCell final : public Problem {
                 bool thorough) override;
   double exact(std::span<const double> x, double worth) override;
   double signal(std::span<const double> x) override;
-  [[nodiscard]] bool exact_is_concave() const override { return !state_->dfe_has_codes_; }
+  [[nodiscard]] bool exact_is_concave() const override {
+    return !state_->dfe_has_codes_ && state_->rule_ == SamplingRule::kBest;
+  }
 
   /// The settings that x stands for. The DFE is the nearest allowed to each cursor.
   [[nodiscard]] Settings settings(std::span<const double> x);

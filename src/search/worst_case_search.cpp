@@ -15,6 +15,15 @@ constexpr int kNumSeedStates = 3;     // states searched for a first good settin
 constexpr int kNumSeedPhases = 4;
 constexpr int kBatch = 16;            // open cells that share one incumbent: no matter how many threads
 
+/// A sampling rule may lead farther from the peak than anyone would go for the best.
+std::vector<Eigen::Index> search_phases(const EyeModel& model) {
+  if (model.link.sampling == SamplingRule::kBest) return candidate_phases(model);
+  const Eigen::Index reach = 3 * model.input.samples_per_ui();
+  std::vector<Eigen::Index> phases;
+  for (Eigen::Index phase = -reach; phase <= reach; ++phase) phases.push_back(phase);
+  return phases;
+}
+
 /// A cell that its root relaxation left open.
 struct OpenCell {
   std::size_t state = 0;
@@ -62,7 +71,7 @@ class Search {
         options_(options),
         control_(control),
         space_(model.link.device.transmitter.fir, options.fir),
-        phases_(candidate_phases(model)) {
+        phases_(search_phases(model)) {
     if (options.max_seconds) {
       deadline_ = std::chrono::steady_clock::now() +
                   std::chrono::duration_cast<std::chrono::steady_clock::duration>(
