@@ -28,11 +28,11 @@ std::size_t FirLimits::main_index() const {
 
 bool keeps_limits(const FirLimits& limits, const Eigen::VectorXd& taps) {
   require_size(limits, taps);
-  long long sum = 0;
+  double sum = 0.0;
   for (std::size_t i = 0; i < limits.taps.size(); ++i) {
     const FirTap& tap = limits.taps[i];
     const long long value = nano(taps[static_cast<Eigen::Index>(i)]);
-    sum += std::abs(value);
+    sum += std::abs(taps[static_cast<Eigen::Index>(i)]);
     if (tap.codes.empty()) {
       if (value < nano(tap.min) || value > nano(tap.max)) return false;
     } else if (std::none_of(tap.codes.begin(), tap.codes.end(),
@@ -41,7 +41,7 @@ bool keeps_limits(const FirLimits& limits, const Eigen::VectorXd& taps) {
     }
     if (tap.position == 0 && limits.min_main && value < nano(*limits.min_main)) return false;
   }
-  return sum <= nano(limits.peak_limit);
+  return nano(sum) <= nano(limits.peak_limit);
 }
 
 Eigen::VectorXd with_remainder(const FirLimits& limits, Eigen::VectorXd taps) {

@@ -25,7 +25,7 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
       main_index_(static_cast<int>(limits.main_index())),
       is_fixed_(fixed.has_value()),
       peak_limit_(limits.peak_limit) {
-  double slack = 0.0;
+  bool whole = true;  // nothing can pass the limit by rounding
   for (int i = 0; i < static_cast<int>(limits.taps.size()); ++i) {
     const FirTap& tap = limits.taps[at(i)];
     positions_.push_back(tap.position);
@@ -40,7 +40,7 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
       for (const Code& code : tap.codes) {
         if (i == main_index_ && limits.min_main && code.value < *limits.min_main - 0.5e-9) continue;
         knob.values.push_back(code.value);
-        if (!is_whole_nano(code.value)) slack += 0.5e-9;
+        whole = whole && is_whole_nano(code.value);
       }
       if (knob.values.empty() && !tap.codes.empty()) is_empty_ = true;
       row_slack_ = tap.codes.empty() ? row_slack_ : 0.5e-9;
@@ -55,7 +55,7 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
     knobs_.push_back(std::move(knob));
   }
   if (fixed) peak_limit_ = std::max(peak_limit_, fixed->lpNorm<1>());
-  if (slack > 0.0) peak_limit_ += 0.5e-9 * static_cast<double>(free_.size() + 1);
+  if (!whole) peak_limit_ += 1e-9;
 }
 
 std::vector<Box> FirSpace::roots(const std::vector<Knob>& all_knobs) const {

@@ -112,7 +112,7 @@ Solution solve(const EyeModel& given, const SearchOptions& options, const RunCon
     solution.settings = resting(model, options);
     solution.score = score(model, solution.settings);
     solution.proof.reason = "no setting keeps every limit";
-    solution.warnings.push_back(error_at("", 0, "no setting keeps every limit of the device"));
+    solution.warnings.push_back(warning_at("", 0, "no setting keeps every limit of the device"));
     return solution;
   }
   solution.settings = result.ties[pick(model, result.ties)];
