@@ -399,6 +399,7 @@ class Checker {
   void check_object(json& value, const json& schema, const std::string& path) {
     const json none = json::object();
     const json& properties = schema.contains("properties") ? schema["properties"] : none;
+    check_member_count(value, schema, properties, path);
     for (auto& [key, member] : value.items()) {
       if (properties.contains(key)) {
         check(member, properties[key], member_path(path, key));
@@ -423,7 +424,6 @@ class Checker {
         }
       }
     }
-    check_member_count(value, schema, properties, path);
     for (const auto& [key, member] : properties.items()) {
       const json* given = annotation(member, "default");
       if (given != nullptr && !value.contains(key)) {
@@ -482,10 +482,7 @@ class Checker {
 
   void check_one_of(json& value, const json& schema, const std::string& path) {
     const json& branches = schema["oneOf"];
-    const bool groups = std::all_of(branches.begin(), branches.end(), [](const json& branch) {
-      return branch.size() == 1 && branch.contains("required");
-    });
-    if (groups) return check_groups(value, branches, path);
+    if (is_groups(branches)) return check_groups(value, branches, path);
 
     const json* best = nullptr;
     int best_fit = -1;
@@ -534,25 +531,47 @@ class Checker {
         fit -= value.contains(key.get_ref<const std::string&>()) ? 0 : 1;
       }
     }
+    if (branch.contains("oneOf") && is_groups(branch["oneOf"])) {
+      fit -= satisfied_groups(value, branch["oneOf"]).empty() ? 1 : 0;
+    }
     return fit;
+  }
+
+  /// Groups of keys of which exactly one must be there.
+  static bool is_groups(const json& branches) {
+    return std::all_of(branches.begin(), branches.end(), [](const json& branch) {
+      return branch.size() == 1 && branch.contains("required");
+    });
+  }
+
+  static std::string group_name(const json& branch) {
+    std::vector<std::string> keys;
+    for (const json& key : branch["required"]) keys.push_back(shown_value(key));
+    return listed(keys, "with");
+  }
+
+  static std::vector<std::string> satisfied_groups(const json& value, const json& branches) {
+    std::vector<std::string> satisfied;
+    for (const json& branch : branches) {
+      const json& keys = branch["required"];
+      if (std::all_of(keys.begin(), keys.end(), [&](const json& key) {
+            return value.contains(key.get_ref<const std::string&>());
+          })) {
+        satisfied.push_back(group_name(branch));
+      }
+    }
+    return satisfied;
   }
 
   void check_groups(const json& value, const json& branches, const std::string& path) {
     if (!value.is_object()) return;
-    std::vector<std::string> names;
-    std::vector<std::string> satisfied;
-    for (const json& branch : branches) {
-      std::vector<std::string> keys;
-      bool all = true;
-      for (const json& key : branch["required"]) {
-        keys.push_back(shown_value(key));
-        all = all && value.contains(key.get_ref<const std::string&>());
-      }
-      names.push_back(listed(keys, "with"));
-      if (all) satisfied.push_back(names.back());
-    }
+    const std::vector<std::string> satisfied = satisfied_groups(value, branches);
     if (satisfied.size() == 1) return;
-    if (satisfied.empty()) return error(path, "needs " + listed(names, "or"));
+    if (satisfied.empty()) {
+      std::vector<std::string> names;
+      for (const json& branch : branches) names.push_back(group_name(branch));
+      return error(path, "needs " + listed(names, "or"));
+    }
     error(path, "has both " + listed(satisfied, "and") + "; allowed: one of them");
   }
 

@@ -1,12 +1,42 @@
 #include "link/channel_reader.hpp"
 
 #include <algorithm>
+#include <cmath>
+#include <limits>
 
 #include "tapwright/base/fft.hpp"
+#include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
+#include "tapwright/channel/line_model.hpp"
+#include "tapwright/channel/network_operations.hpp"
+#include "tapwright/channel/ports.hpp"
+#include "tapwright/channel/touchstone.hpp"
 
 namespace tapwright {
 namespace {
+
+constexpr double kReferenceOhm = 100.0;  ///< of modelled pieces, differential
+
+/// Gives the notes of another room, which know no key, the section's place.
+void adopt_here(const Section& section, const std::vector<Diagnostic>& notes) {
+  for (const Diagnostic& note : notes) {
+    if (!note.file.empty()) {
+      section.adopt({note});
+    } else if (note.severity == Diagnostic::Severity::kError) {
+      section.error(note.message);
+    } else {
+      section.warning(note.message);
+    }
+  }
+}
+
+template <class T>
+std::optional<T> value_or_notes(const Section& section, Result<T> result) {
+  adopt_here(section, result.notes);
+  return std::move(result.value);
+}
+
+// ---- Records in time ------------------------------------------------------------------------
 
 /// Whether the record has the receiver's filters in it already.
 bool is_at_slicer(const Section& record, int samples_per_ui) {
@@ -14,36 +44,258 @@ bool is_at_slicer(const Section& record, int samples_per_ui) {
   const bool at_slicer = record.text("taken_at") == "slicer";
   if (!at_slicer && samples_per_ui == 1) {
     record.error("taken_at",
-                 "a record with one sample per UI can't be filtered; allowed: "
-                 "\"slicer\"");
+                 "a record with one sample per UI can't be filtered; allowed: \"slicer\"");
   }
   return at_slicer;
 }
 
-ReceivedSpectrum read_pulse(const Section& pulse, const PulseConditions& conditions) {
-  ReceivedSpectrum spectrum;
-  spectrum.samples_per_ui = pulse.integer("samples_per_ui");
-  spectrum.ui_s = conditions.ui_s;
-  spectrum.at_slicer = is_at_slicer(pulse, spectrum.samples_per_ui);
-
-  const nlohmann::json& samples = pulse.value().at("samples_v");
-  const auto size = static_cast<Eigen::Index>(samples.size());
-  const Eigen::Index per_ui = spectrum.samples_per_ui;
-  const Eigen::Index num_ui = (size + per_ui - 1) / per_ui;
-  // Room behind the pulse, so that what the receiver's filters make of it does not come round.
-  const Eigen::Index room = spectrum.at_slicer ? 0 : std::max<Eigen::Index>(num_ui, 128);
-  const Eigen::Index padded = quick_transform_size(std::max(num_ui + room, conditions.min_num_ui));
-  spectrum.num_samples = padded * per_ui;
+std::optional<ReceivedSpectrum> read_pulse(const Section& pulse, const TimeGrid& grid) {
+  const nlohmann::json& given = pulse.value().at("samples_v");
   const double launch_v = mvppd_to_peak_v(pulse.number("at_swing_mvppd"));
-  Eigen::VectorXd record = Eigen::VectorXd::Zero(spectrum.num_samples);
-  for (Eigen::Index i = 0; i < size; ++i) {
-    record[i] = samples[static_cast<std::size_t>(i)].get<double>() / launch_v;
+  Eigen::VectorXd samples_v(static_cast<Eigen::Index>(given.size()));
+  for (Eigen::Index i = 0; i < samples_v.size(); ++i) {
+    samples_v[i] = given[static_cast<std::size_t>(i)].get<double>() / launch_v;
   }
-  if (record.maxCoeff() <= 0.0) {
+  if (!(samples_v.maxCoeff() > 0.0)) {
     pulse.error("samples_v", "no sample is above 0; a pulse needs a positive peak");
+    return std::nullopt;
   }
-  spectrum.values = real_spectrum(record);
+  const int samples_per_ui = pulse.integer("samples_per_ui");
+  std::optional<ReceivedSpectrum> spectrum = value_or_notes(
+      pulse, received_spectrum(PulseResponse(samples_v, samples_per_ui, grid.ui_s), grid, ""));
+  if (spectrum) spectrum->at_slicer = is_at_slicer(pulse, samples_per_ui);
   return spectrum;
+}
+
+// ---- Networks and lines ---------------------------------------------------------------------
+
+/// A piece of a cascade: measured, or to be computed on whatever frequencies the cascade has.
+struct Piece {
+  std::optional<Network> measured;
+  LineModel line;
+  double length_m = 0.0;
+  /// Two uncoupled lines driven differentially have the S-parameters of one between ports of half
+  /// the reference.
+  bool is_two_lines = false;
+};
+
+std::optional<Piece> read_touchstone(const Section& section, InputFiles& files) {
+  const Section name = section.at("file");
+  const std::optional<std::string> text = files.read(name);
+  if (!text) return std::nullopt;
+  const std::optional<Network> network =
+      value_or_notes(name, parse_touchstone(*text, files.resolved(name.text())));
+  if (!network) return std::nullopt;
+  PortMap map{{1}, {2}};
+  if (section.has("ports")) {
+    const Section ports = section.at("ports");
+    map.in = ports.value().at("in").get<std::vector<int>>();
+    map.out = ports.value().at("out").get<std::vector<int>>();
+  } else if (network->num_ports() != 2) {
+    section.error(
+        "the file has " + std::to_string(network->num_ports()) +
+        " ports, so key \"ports\" must say which look to the driver (\"in\") and which to "
+        "the receiver (\"out\")");
+    return std::nullopt;
+  }
+  std::optional<Network> path = value_or_notes(section.has("ports") ? section.at("ports") : section,
+                                               through_path(*network, map, ""));
+  if (!path) return std::nullopt;
+  return Piece{std::move(*path), {}, 0.0, false};
+}
+
+PhysicalLine read_dimensions(const Section& line) {
+  PhysicalLine out;
+  const auto metres = [](const Section& section, const char* key) {
+    return mm_to_m(section.number(key));
+  };
+  if (line.has("microstrip")) {
+    const Section form = line.at("microstrip");
+    out.geometry = Microstrip{metres(form, "width_mm"), metres(form, "height_mm"),
+                              metres(form, "thickness_mm")};
+  } else if (line.has("stripline")) {
+    const Section form = line.at("stripline");
+    out.geometry = Stripline{metres(form, "width_mm"), metres(form, "plane_spacing_mm"),
+                             metres(form, "thickness_mm")};
+  } else if (line.has("coax")) {
+    const Section form = line.at("coax");
+    out.geometry = Coax{metres(form, "inner_diameter_mm"), metres(form, "outer_diameter_mm")};
+  } else {
+    const Section form = line.at("wire_pair");
+    out.geometry = WirePair{form.has("gauge_awg") ? awg_diameter_m(form.number("gauge_awg"))
+                                                  : metres(form, "diameter_mm"),
+                            metres(form, "spacing_mm")};
+  }
+  const Section conductor = line.at("conductor");
+  out.conductor.conductivity_s_per_m = conductor.number("conductivity_s_per_m");
+  out.conductor.temperature_c = conductor.number("temperature_c");
+  out.conductor.temperature_coefficient_per_k = conductor.number("temperature_coefficient_per_k");
+  if (const auto um = conductor.maybe("roughness_um")) out.conductor.roughness_rms_m = *um * 1e-6;
+  const Section dielectric = line.at("dielectric");
+  out.dielectric.eps_r = dielectric.number("eps_r");
+  out.dielectric.tan_delta = dielectric.number("tan_delta");
+  out.dielectric.frequency_hz = ghz_to_hz(dielectric.number("frequency_ghz"));
+  return out;
+}
+
+LineModel read_line_model(const Section& line) {
+  if (line.has("loss_db_per_m")) {
+    DatasheetLine sheet;
+    for (const Section& point : line.at("loss_db_per_m").items()) {
+      sheet.loss.push_back({ghz_to_hz(point.at(std::size_t{0}).number()), point.at(1).number()});
+    }
+    sheet.delay_s_per_m = ns_to_s(line.number("delay_ns_per_m"));
+    sheet.impedance_ohm = line.number("impedance_ohm");
+    return sheet;
+  }
+  if (line.has("a1_sqrt_ns_per_mm")) {
+    return annex_line(line.number("gamma0_per_mm"), line.number("a1_sqrt_ns_per_mm"),
+                      line.number("a2_ns_per_mm"), line.number("tau_ns_per_mm"),
+                      line.number("impedance_ohm"));
+  }
+  if (line.has("l_nh_per_m")) {
+    return RlgcLine{line.number("r_ohm_per_m"), nh_to_h(line.number("l_nh_per_m")),
+                    line.number("g_s_per_m"), pf_to_f(line.number("c_pf_per_m"))};
+  }
+  return read_dimensions(line);
+}
+
+std::optional<Piece> read_line(const Section& line) {
+  Piece piece;
+  piece.line = read_line_model(line);
+  piece.length_m = line.number("length_m");
+  piece.is_two_lines =
+      line.has("dielectric") && !line.has("wire_pair") && line.value().at("pair").get<bool>();
+  const std::vector<Diagnostic> notes = check_line(piece.line, "");
+  adopt_here(line, notes);
+  if (has_error(notes)) return std::nullopt;
+  return piece;
+}
+
+/// The measured piece with the smallest steps; none when nothing is measured.
+const Network* finest_of(const std::vector<Piece>& pieces) {
+  const auto step = [](const Network& network) {
+    return (network.frequencies_hz[network.num_points() - 1] - network.frequencies_hz[0]) /
+           static_cast<double>(network.num_points());
+  };
+  const Network* finest = nullptr;
+  for (const Piece& piece : pieces) {
+    if (!piece.measured) continue;
+    if (finest == nullptr || step(*piece.measured) < step(*finest)) finest = &*piece.measured;
+  }
+  return finest;
+}
+
+/// Frequencies for the modelled pieces: those of the finest measured piece within the range that
+/// all measured ones share, in smaller steps where the lines' delay asks for them; with nothing
+/// measured, what the symbol rate asks for.
+Eigen::VectorXd cascade_frequencies_hz(const std::vector<Piece>& pieces, double symbol_rate_bd) {
+  double delay_s = 0.0;
+  double first_hz = 0.0;
+  double last_hz = std::numeric_limits<double>::infinity();
+  for (const Piece& piece : pieces) {
+    if (!piece.measured) {
+      delay_s += line_delay_s(piece.line, piece.length_m, 0.5 * symbol_rate_bd);
+      continue;
+    }
+    const Eigen::VectorXd& f = piece.measured->frequencies_hz;
+    first_hz = std::max(first_hz, f[0]);
+    last_hz = std::min(last_hz, f[f.size() - 1]);
+  }
+  const Network* finest = finest_of(pieces);
+  if (finest == nullptr) return modelled_frequencies_hz(symbol_rate_bd, delay_s);
+
+  std::vector<double> inside;
+  for (const double f : finest->frequencies_hz) {
+    if (f >= first_hz && f <= last_hz) inside.push_back(f);
+  }
+  std::vector<double> all;
+  for (std::size_t i = 0; i < inside.size(); ++i) {
+    if (i > 0) {
+      const double step = inside[i] - inside[i - 1];
+      const int parts = std::clamp(static_cast<int>(std::ceil(8.0 * delay_s * step)), 1, 64);
+      for (int k = 1; k < parts; ++k) all.push_back(inside[i - 1] + step * k / parts);
+    }
+    all.push_back(inside[i]);
+  }
+  return Eigen::Map<const Eigen::VectorXd>(all.data(), static_cast<Eigen::Index>(all.size()));
+}
+
+Network modelled(const Piece& piece, const Eigen::VectorXd& frequencies_hz) {
+  Network network = line_network(piece.line, piece.length_m, frequencies_hz,
+                                 piece.is_two_lines ? kReferenceOhm / 2 : kReferenceOhm);
+  network.reference_ohm.setConstant(kReferenceOhm);
+  return network;
+}
+
+/// One two-port from the pieces.
+std::optional<Network> joined(const Section& section, std::vector<Piece> pieces,
+                              double symbol_rate_bd) {
+  const bool all_measured =
+      std::all_of(pieces.begin(), pieces.end(), [](const Piece& piece) { return piece.measured; });
+  std::vector<Network> networks;
+  networks.reserve(pieces.size());
+  if (all_measured) {
+    for (Piece& piece : pieces) networks.push_back(std::move(*piece.measured));
+  } else {
+    const Eigen::VectorXd frequencies_hz = cascade_frequencies_hz(pieces, symbol_rate_bd);
+    if (frequencies_hz.size() == 0) {
+      section.error("the measured files share no range of frequencies");
+      return std::nullopt;
+    }
+    const Network* finest = finest_of(pieces);
+    const Eigen::VectorXd finest_hz = finest == nullptr ? frequencies_hz : finest->frequencies_hz;
+    for (Piece& piece : pieces) {
+      // Files on one grid follow it quietly when it is made finer; of others cascade() tells.
+      const bool follows = piece.measured && piece.measured->frequencies_hz == finest_hz &&
+                           finest_hz != frequencies_hz;
+      networks.push_back(!piece.measured ? modelled(piece, frequencies_hz)
+                         : follows       ? resampled(*piece.measured, frequencies_hz)
+                                         : std::move(*piece.measured));
+    }
+  }
+  if (networks.size() == 1) return std::move(networks.front());
+  return value_or_notes(section, cascade(networks, ""));
+}
+
+std::optional<ReceivedSpectrum> read_network(const Section& channel,
+                                             const PulseConditions& conditions, InputFiles& files) {
+  std::vector<Piece> pieces;
+  bool ac_coupled = false;
+  const auto add_touchstone = [&](const Section& section) {
+    const std::optional<Piece> piece = read_touchstone(section, files);
+    if (!piece) return;
+    ac_coupled = ac_coupled || section.value().at("ac_coupled").get<bool>();
+    pieces.insert(pieces.end(), static_cast<std::size_t>(section.integer("repeat")), *piece);
+  };
+  const auto add_line = [&](const Section& section) {
+    if (std::optional<Piece> piece = read_line(section)) pieces.push_back(std::move(*piece));
+  };
+  const auto add = [&](const Section& section) {
+    section.has("touchstone") ? add_touchstone(section.at("touchstone"))
+                              : add_line(section.at("line"));
+  };
+  if (channel.has("cascade")) {
+    for (const Section& piece : channel.at("cascade").items()) add(piece);
+  } else if (channel.has("touchstone") && channel.at("touchstone").value().is_array()) {
+    for (const Section& file : channel.at("touchstone").items()) add_touchstone(file);
+  } else {
+    add(channel);
+  }
+  if (channel.failed()) return std::nullopt;
+
+  const std::optional<Network> network =
+      joined(channel, std::move(pieces), 1.0 / conditions.grid.ui_s);
+  if (!network) return std::nullopt;
+  const auto ending = [&](std::optional<double> ohm, double farad, Eigen::Index port) {
+    return Termination{ohm.value_or(network->reference_ohm[port].real()), farad, std::nullopt};
+  };
+  FrequencyResponse response =
+      terminated_response(*network, ending(conditions.source_ohm, conditions.source_f, 0),
+                          ending(conditions.load_ohm, conditions.load_f, 1));
+  response.ac_coupled = ac_coupled;
+  return value_or_notes(channel,
+                        received_spectrum(response, conditions.grid, conditions.launch, ""));
 }
 
 }  // namespace
@@ -54,10 +306,19 @@ std::optional<int> samples_per_ui_of(const Section& channel) {
 }
 
 std::optional<ReceivedSpectrum> read_channel(const Section& channel,
-                                             const PulseConditions& conditions,
-                                             [[maybe_unused]] InputFiles& files) {
-  ReceivedSpectrum spectrum = read_pulse(channel.at("pulse"), conditions);
-  if (channel.failed()) return std::nullopt;
+                                             const PulseConditions& conditions, InputFiles& files) {
+  std::optional<ReceivedSpectrum> spectrum = channel.has("pulse")
+                                                 ? read_pulse(channel.at("pulse"), conditions.grid)
+                                                 : read_network(channel, conditions, files);
+  return channel.failed() ? std::nullopt : std::move(spectrum);
+}
+
+ReceivedSpectrum lengthened(ReceivedSpectrum spectrum, Eigen::Index num_samples) {
+  if (spectrum.num_samples >= num_samples) return spectrum;
+  Eigen::VectorXd record = Eigen::VectorXd::Zero(num_samples);
+  record.head(spectrum.num_samples) = real_record(spectrum.values, spectrum.num_samples);
+  spectrum.values = real_spectrum(record);
+  spectrum.num_samples = num_samples;
   return spectrum;
 }
 

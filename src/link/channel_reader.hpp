@@ -11,17 +11,23 @@ namespace tapwright {
 
 /// What a channel's pulse depends on beside the channel itself.
 struct PulseConditions {
-  double ui_s = 0.0;
-  int samples_per_ui = 32;
-  Eigen::Index min_num_ui = 0;  ///< the record holds at least so many UI
+  TimeGrid grid;
+  LaunchShape launch;
+  std::optional<double> source_ohm;  ///< none: the reference of the first piece
+  double source_f = 0.0;
+  std::optional<double> load_ohm;  ///< none: the reference of the last piece
+  double load_f = 0.0;
 };
 
-/// Samples per UI that the channel fixes; empty when any number will do.
+/// Samples per UI of an inline pulse; empty for any other kind of channel.
 [[nodiscard]] std::optional<int> samples_per_ui_of(const Section& channel);
 
 /// Notes go to the section; empty when there is an error.
 [[nodiscard]] std::optional<ReceivedSpectrum> read_channel(const Section& channel,
                                                            const PulseConditions& conditions,
                                                            InputFiles& files);
+
+/// The same record with zeros behind it, so that all records of a link are equally long.
+[[nodiscard]] ReceivedSpectrum lengthened(ReceivedSpectrum spectrum, Eigen::Index num_samples);
 
 }  // namespace tapwright

@@ -1,11 +1,11 @@
 #pragma once
 // Files of this folder, put into the program when it is built.
 
-#include <string_view>
+#include <string>
 
 namespace tapwright {
 
-extern const std::string_view kLinkSchemaText;
-extern const std::string_view kExampleLinkText;
+[[nodiscard]] std::string link_schema_text();
+[[nodiscard]] std::string example_link_text();
 
 }  // namespace tapwright

@@ -12,6 +12,7 @@
 #include "link/files.hpp"
 #include "link/section.hpp"
 #include "tapwright/base/digest.hpp"
+#include "tapwright/base/fft.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
 
@@ -22,7 +23,7 @@ using nlohmann::json;
 using Notes = std::vector<Diagnostic>;
 
 const json& schema() {
-  static const json kSchema = json::parse(kLinkSchemaText);
+  static const json kSchema = json::parse(link_schema_text());
   return kSchema;
 }
 
@@ -271,49 +272,78 @@ Aggressor read_aggressor(const Section& section, std::size_t index, const Link& 
 /// Channel and crosstalk on one grid: whatever record is the longest sets its length.
 void read_channels(const Section& root, Link& link, InputFiles& files) {
   const Section signal = root.at("signal");
-  const std::optional<int> own = samples_per_ui_of(root.at("channel"));
-  link.samples_per_ui =
-      signal.has("samples_per_ui") ? signal.integer("samples_per_ui") : own.value_or(32);
-  PulseConditions conditions{link.signal.ui_s(), link.samples_per_ui, 0};
   std::vector<Section> sections = {root.at("channel")};
   for (const Section& aggressor : root.at("crosstalk").items()) {
     sections.push_back(aggressor.at("channel"));
   }
+  link.samples_per_ui = signal.has("samples_per_ui")
+                            ? signal.integer("samples_per_ui")
+                            : samples_per_ui_of(sections.front()).value_or(32);
   for (const Section& section : sections) {
-    const std::optional<int> wanted = samples_per_ui_of(section);
-    if (wanted && *wanted != link.samples_per_ui) {
-      section.at("pulse").error("samples_per_ui", "the pulse has " + std::to_string(*wanted) +
-                                                      " samples per UI, the link has " +
-                                                      std::to_string(link.samples_per_ui));
-    }
+    if ((samples_per_ui_of(section) == 1) == (link.samples_per_ui == 1)) continue;
+    const std::string found =
+        "the link has " + std::to_string(link.samples_per_ui) + " samples per UI, this channel ";
+    section.error(link.samples_per_ui == 1 ? found +
+                                                 "can't be sampled once per UI; only a pulse of "
+                                                 "one sample per UI can"
+                                           : found + "has 1");
   }
+  const Section transmitter = root.at("transmitter");
+  const Section receiver = root.at("receiver");
+  PulseConditions conditions;
+  conditions.grid = {link.signal.ui_s(), link.samples_per_ui, 0};
+  if (link.signal.span_ui) {
+    conditions.grid.min_num_ui = (*link.signal.span_ui)[0] + (*link.signal.span_ui)[1] + 1;
+  }
+  if (const auto ps = transmitter.maybe("rise_time_ps"))
+    conditions.launch.rise_time_s = ps_to_s(*ps);
+  if (const auto mhz = receiver.maybe("high_pass_mhz")) conditions.launch.high_pass_hz = *mhz * 1e6;
+  conditions.source_ohm = transmitter.maybe("impedance_ohm");
+  conditions.source_f = pf_to_f(transmitter.number("capacitance_pf"));
+  conditions.load_ohm = receiver.maybe("impedance_ohm");
+  conditions.load_f = pf_to_f(receiver.number("capacitance_pf"));
+
   if (root.failed()) return;
 
-  std::vector<ReceivedSpectrum> spectra(sections.size());
-  for (int pass = 0; pass < 2; ++pass) {
-    Eigen::Index longest = 0;
-    for (std::size_t i = 0; i < sections.size(); ++i) {
-      if (pass > 0 && spectra[i].num_samples == conditions.min_num_ui * link.samples_per_ui) {
-        continue;
-      }
-      std::optional<ReceivedSpectrum> spectrum = read_channel(sections[i], conditions, files);
-      if (!spectrum) continue;
-      spectra[i] = std::move(*spectrum);
+  std::vector<ReceivedSpectrum> spectra;
+  Eigen::Index longest = 0;
+  for (std::size_t i = 0; i < sections.size(); ++i) {
+    PulseConditions own = conditions;
+    const double ui_ratio = i == 0 ? 1.0 : link.crosstalk[i - 1].ui_ratio;
+    const double samples_per_own_ui = link.samples_per_ui * ui_ratio;
+    own.grid.ui_s *= ui_ratio;
+    own.grid.samples_per_ui = static_cast<int>(std::lround(samples_per_own_ui));
+    if (std::abs(samples_per_own_ui - own.grid.samples_per_ui) > 1e-6 * samples_per_own_ui) {
+      root.at("crosstalk")
+          .at(i - 1)
+          .error("symbol_rate_gbd",
+                 "one UI at this rate is " + significant(samples_per_own_ui, 6) +
+                     " samples; wanted a whole number (signal.samples_per_ui sets it)");
+      continue;
     }
-    if (root.failed()) return;
-    for (const ReceivedSpectrum& one : spectra) longest = std::max(longest, one.num_samples);
-    conditions.min_num_ui = longest / link.samples_per_ui;
+    std::optional<ReceivedSpectrum> spectrum = read_channel(sections[i], own, files);
+    if (!spectrum) continue;
+    spectrum->samples_per_ui = link.samples_per_ui;
+    spectrum->ui_s = link.signal.ui_s();
+    longest = std::max(longest, spectrum->num_samples);
+    spectra.push_back(std::move(*spectrum));
   }
-  for (std::size_t i = 1; i < spectra.size(); ++i) {
+  if (std::any_of(spectra.begin(), spectra.end(),
+                  [&](const ReceivedSpectrum& one) { return one.num_samples != longest; })) {
+    const Eigen::Index per_ui = link.samples_per_ui;
+    longest = per_ui * quick_transform_size((longest + per_ui - 1) / per_ui);
+  }
+  if (root.failed()) return;
+  for (std::size_t i = 0; i < spectra.size(); ++i) {
     if (spectra[i].at_slicer != spectra[0].at_slicer) {
       sections[i].error(std::string("is taken at the ") +
                         (spectra[i].at_slicer ? "slicer" : "receiver's input") +
                         ", the victim's channel at the " +
                         (spectra[0].at_slicer ? "slicer" : "receiver's input"));
     }
-    link.crosstalk[i - 1].spectrum = std::move(spectra[i]);
+    ReceivedSpectrum& place = i == 0 ? link.channel : link.crosstalk[i - 1].spectrum;
+    place = lengthened(spectra[i], longest);
   }
-  link.channel = std::move(spectra[0]);
 }
 
 /// What one sample per UI, or a record taken at the slicer, leaves no room for.
@@ -432,8 +462,8 @@ Result<std::vector<LinkNumber>> numbers_in_link(std::string_view text, const std
   return {std::move(numbers), std::move(document.notes)};
 }
 
-std::string link_schema() { return std::string(kLinkSchemaText); }
+std::string link_schema() { return link_schema_text(); }
 
-std::string example_link() { return std::string(kExampleLinkText); }
+std::string example_link() { return example_link_text(); }
 
 }  // namespace tapwright

@@ -1,0 +1,225 @@
+// Channels of a link file: what comes out must not depend on how the same channel is written.
+
+#include <gtest/gtest.h>
+
+#include <filesystem>
+#include <fstream>
+#include <numbers>
+
+#include "support/input_files.hpp"
+#include "support/measured_data.hpp"
+#include "tapwright/base/digest.hpp"
+#include "tapwright/base/fft.hpp"
+#include "tapwright/channel/line_model.hpp"
+#include "tapwright/channel/touchstone.hpp"
+#include "tapwright/link/read_link.hpp"
+
+namespace tapwright {
+namespace {
+
+/// A folder that goes away with the test.
+class Folder {
+ public:
+  Folder() {
+    std::string name = (std::filesystem::temp_directory_path() / "tapwright_XXXXXX").string();
+    path_ = ::mkdtemp(name.data());
+  }
+  Folder(const Folder&) = delete;
+  Folder& operator=(const Folder&) = delete;
+  ~Folder() { std::filesystem::remove_all(path_); }
+  [[nodiscard]] std::string path() const { return path_.string(); }
+  void write(const std::string& name, const std::string& text) const {
+    std::filesystem::create_directories((path_ / name).parent_path());
+    std::ofstream(path_ / name, std::ios::binary) << text;
+  }
+
+ private:
+  std::filesystem::path path_;
+};
+
+Result<Link> with_channel(const std::string& channel, const std::string& folder = "",
+                          const std::string& more = "") {
+  return parse_link(R"({"format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 6.25},
+      "channel": )" + channel +
+                        more + "}",
+                    "link.json", folder, {{"transmitter.rise_time_ps", "60"}});
+}
+
+Eigen::VectorXd record(const Result<Link>& link) {
+  for (const Diagnostic& note : link.notes) ADD_FAILURE() << to_string(note);
+  if (!link) return Eigen::VectorXd::Zero(1);
+  return real_record(link.value->channel.values, link.value->channel.num_samples);
+}
+
+double difference(const Eigen::VectorXd& a, const Eigen::VectorXd& b) {
+  const Eigen::Index n = std::min(a.size(), b.size());
+  EXPECT_GT(n, 1000);
+  return (a.head(n) - b.head(n)).cwiseAbs().maxCoeff();
+}
+
+const char* const kCable =
+    R"("loss_db_per_m": [[1, 0.9], [3.125, 1.75]], "delay_ns_per_m": 4.6, "impedance_ohm": )";
+
+std::string cable(double length_m, double impedance_ohm = 100.0) {
+  return "{\"length_m\": " + std::to_string(length_m) + ", " + kCable +
+         std::to_string(impedance_ohm) + "}";
+}
+
+TEST(ChannelReader, APulseThroughAMatchedLosslessEndKeepsItsArea) {
+  // Nothing is lost at DC, so the samples add up to one UI of 1 V: samples_per_ui volts.
+  const Eigen::VectorXd p = record(with_channel("{\"line\": " + cable(2.0) + "}"));
+  // Method: the record is cut where the skin effect's tail, going with t^(-3/2), still carries a
+  // share of about sqrt(time constant / record) of the area; 1 % for this cable.
+  EXPECT_NEAR(p.sum(), 32.0, 0.32);
+  EXPECT_GT(p.maxCoeff(), 0.3);
+}
+
+TEST(ChannelReader, ALineCutInTwoIsTheSameLine) {
+  const Eigen::VectorXd one = record(with_channel("{\"line\": " + cable(3.0) + "}"));
+  const Eigen::VectorXd two = record(with_channel("{\"cascade\": [{\"line\": " + cable(1.25) +
+                                                  "}, {\"line\": " + cable(1.75) + "}]}"));
+  // Rounding only: the cascade of matched lines multiplies what the one line adds up.
+  EXPECT_LT(difference(one, two), 1e-10);
+}
+
+TEST(ChannelReader, ALineInATouchstoneFileIsTheSameLine) {
+  const Folder folder;
+  const DatasheetLine sheet{{{1e9, 0.9}, {3.125e9, 1.75}}, 4.6e-9, 100.0};
+  const Eigen::VectorXd frequencies_hz =
+      modelled_frequencies_hz(6.25e9, line_delay_s(sheet, 3.0, 3.125e9));
+  const Network line = line_network(sheet, 3.0, frequencies_hz, 100.0);
+  folder.write("cables/line.s2p", write_touchstone(line));
+  const Result<Link> link =
+      with_channel(R"({"touchstone": {"file": "cables/line.s2p"}})", folder.path());
+  // Exact: the file holds the same doubles, on the same frequencies.
+  EXPECT_EQ(difference(record(link), record(with_channel("{\"line\": " + cable(3.0) + "}"))), 0.0);
+  ASSERT_TRUE(link);
+  ASSERT_EQ(link.value->inputs.size(), 2U);
+  EXPECT_EQ(link.value->inputs[1].path, folder.path() + "/cables/line.s2p");
+  EXPECT_EQ(link.value->inputs[1].sha256, sha256_hex(test::bytes_of(link.value->inputs[1].path)));
+}
+
+TEST(ChannelReader, RepeatsListsAndCascadesOfOneFileAgree) {
+  const Folder folder;
+  const DatasheetLine sheet{{{1e9, 0.9}, {3.125e9, 1.75}}, 4.6e-9, 95.0};
+  folder.write("l.s2p", write_touchstone(line_network(
+                            sheet, 0.5, Eigen::VectorXd::LinSpaced(2501, 0.0, 25e9), 100.0)));
+  const std::string file = R"({"file": "l.s2p", "ports": {"in": [2], "out": [1]}})";
+  const auto p = [&](const std::string& channel) {
+    return record(with_channel(channel, folder.path()));
+  };
+  const Eigen::VectorXd listed = p("{\"touchstone\": [" + file + "," + file + "]}");
+  EXPECT_EQ(listed,
+            p("{\"cascade\": [{\"touchstone\": " + file + "}, {\"touchstone\": " + file + "}]}"));
+  EXPECT_EQ(listed, p(R"({"touchstone": {"file": "l.s2p", "repeat": 2}})"));
+}
+
+TEST(ChannelReader, AMeasuredPieceAndALineJoinOnFinerFrequenciesWhereTheDelayAsksForThem) {
+  const Folder folder;
+  const DatasheetLine sheet{{{1e9, 0.9}, {3.125e9, 1.75}}, 4.6e-9, 100.0};
+  // 40 MHz a point: enough for 0.2 m (0.92 ns), too coarse for 5 m more (23 ns).
+  folder.write("l.s2p", write_touchstone(line_network(
+                            sheet, 0.2, Eigen::VectorXd::LinSpaced(626, 0.0, 25e9), 100.0)));
+  const Eigen::VectorXd joined = record(with_channel(
+      R"({"cascade": [{"touchstone": {"file": "l.s2p"}}, {"line": )" + cable(5.0) + "}]}",
+      folder.path()));
+  const Eigen::VectorXd line = record(with_channel("{\"line\": " + cable(5.2) + "}"));
+  // Method: the two are sampled in frequency differently, so that the skin effect's slow tail
+  // comes round in a record of another length; under a thousandth of the peak.
+  EXPECT_LT(difference(joined, line), 1e-3 * line.maxCoeff());
+}
+
+TEST(ChannelReader, TerminationsDivideTheVoltageAsOhmsLawSays) {
+  // A line of no length between 100 ohm and 50 ohm: 2 * 50 / (100 + 50) of the matched amplitude.
+  const auto peak = [](const std::string& more) {
+    return record(with_channel("{\"line\": " + cable(0.0) + "}", "", more)).maxCoeff();
+  };
+  // Rounding only.
+  EXPECT_NEAR(peak(R"(, "receiver": {"impedance_ohm": 50})") / peak(""), 2.0 / 3.0, 1e-12);
+  EXPECT_NEAR(peak(R"(, "transmitter": {"impedance_ohm": 50})") / peak(""), 4.0 / 3.0, 1e-12);
+}
+
+TEST(ChannelReader, EveryFormOfALineReads) {
+  const char* const forms[] = {
+      R"({"length_m": 0.151, "a1_sqrt_ns_per_mm": 4.114e-4, "a2_ns_per_mm": 2.547e-4,
+          "tau_ns_per_mm": 6.191e-3, "impedance_ohm": 109.8})",
+      R"({"length_m": 1, "l_nh_per_m": 500, "c_pf_per_m": 50, "r_ohm_per_m": 5})",
+      R"({"length_m": 0.2, "microstrip": {"width_mm": 0.3, "height_mm": 0.17,
+          "thickness_mm": 0.035}, "dielectric": {"eps_r": 4.2, "tan_delta": 0.02}})",
+      R"({"length_m": 0.2, "stripline": {"width_mm": 0.15, "plane_spacing_mm": 0.4,
+          "thickness_mm": 0.018}, "dielectric": {"eps_r": 3.7, "tan_delta": 0.01},
+          "conductor": {"roughness_um": 1.5, "temperature_c": 60}})",
+      R"({"length_m": 1, "coax": {"inner_diameter_mm": 0.5, "outer_diameter_mm": 1.65},
+          "dielectric": {"eps_r": 2.1, "tan_delta": 0.0005}})",
+      R"({"length_m": 2, "wire_pair": {"gauge_awg": 28, "spacing_mm": 0.9},
+          "dielectric": {"eps_r": 1.9, "tan_delta": 0.001}})"};
+  for (const char* form : forms) {
+    const Result<Link> link = with_channel(std::string("{\"line\": ") + form + "}");
+    ASSERT_TRUE(link) << form << (link.notes.empty() ? "" : to_string(link.notes[0]));
+    EXPECT_GT(real_record(link.value->channel.values, link.value->channel.num_samples).maxCoeff(),
+              0.1)
+        << form;
+  }
+}
+
+TEST(ChannelReader, ADeviceFileStandsInAndItsNamesCountFromItsOwnFolder) {
+  const Folder folder;
+  folder.write("parts/device.json", R"({"format": "tapwright.device/1",
+      "transmitter": {"swing_mvppd": [400, 800]},
+      "receiver": {"bandwidth_ghz": 5, "ctle": [{"code": 4, "response": {"file": "ctle.csv"}}]},
+      "registers": [{"field": "SWING", "address": "0x10", "bits": [0, 0], "knob": "swing"}]})");
+  folder.write("parts/ctle.csv", "f_hz,gain_db,phase_deg\n0,-6,0\n1e9,-3,10\n5e9,0,-20\n");
+  const Result<Link> link =
+      with_channel("{\"line\": " + cable(1.0) + "}", folder.path(),
+                   R"(, "device": "parts/device.json", "transmitter": {"swing_mvppd": 600})");
+  for (const Diagnostic& note : link.notes) ADD_FAILURE() << to_string(note);
+  ASSERT_TRUE(link);
+  const Device& device = link.value->device;
+  EXPECT_EQ(device.transmitter.swings, (std::vector<Swing>{{0, 0.3}}));  // the link's own
+  EXPECT_EQ(device.receiver.bandwidth_hz, 5e9);
+  ASSERT_EQ(device.receiver.ctle.size(), 1U);
+  const auto& ctle = std::get<CtleMeasured>(device.receiver.ctle[0].response);
+  EXPECT_EQ(ctle.frequencies_hz, Eigen::Vector3d(0, 1e9, 5e9));
+  EXPECT_NEAR(std::abs(ctle.values[1]), 0.70794578, 1e-8);  // 10^(-3/20), printed to 1e-8
+  EXPECT_NEAR(std::arg(ctle.values[1]), 10 * std::numbers::pi / 180, 1e-15);
+  ASSERT_EQ(link.value->registers.size(), 1U);
+  EXPECT_EQ(link.value->registers[0].address, 16U);
+  ASSERT_EQ(link.value->inputs.size(), 3U);
+  EXPECT_EQ(link.value->inputs[1].path, folder.path() + "/parts/device.json");
+  EXPECT_EQ(link.value->inputs[2].path, folder.path() + "/parts/ctle.csv");
+}
+
+TEST(ChannelReader, AFaultInADeviceFileNamesThatFile) {
+  const Folder folder;
+  folder.write("device.json", R"({"format": "tapwright.device/1",
+      "transmitter": {"fir": [{"position": 0, "min": 1, "max": 0.5}]}})");
+  const Result<Link> link =
+      with_channel("{\"line\": " + cable(1.0) + "}", folder.path(), R"(, "device": "device.json")");
+  ASSERT_EQ(link.notes.size(), 1U);
+  EXPECT_EQ(
+      to_string(link.notes[0]),
+      folder.path() + "/device.json:2: error: transmitter.fir[0].min: min 1 lies above max 0.5");
+}
+
+TEST(ChannelReader, MeasuredBoardsReadAndCascade) {
+  const auto path = test::measured_file("microstrip_200mm.s2p");
+  if (!path) GTEST_SKIP() << test::kNoMeasuredFiles;
+  const std::string folder = std::filesystem::path(*path).parent_path().string();
+  const auto peak = [&](int repeat) {
+    const Result<Link> link =
+        with_channel(R"({"touchstone": {"file": "microstrip_200mm.s2p", "repeat": )" +
+                         std::to_string(repeat) + "}}",
+                     folder);
+    EXPECT_TRUE(link);
+    return link
+               ? real_record(link.value->channel.values, link.value->channel.num_samples).maxCoeff()
+               : 0.0;
+  };
+  const double once = peak(1);
+  EXPECT_GT(once, 0.5);
+  EXPECT_LT(once, 1.0);
+  EXPECT_LT(peak(3), once);
+}
+
+}  // namespace
+}  // namespace tapwright
