@@ -39,7 +39,8 @@ struct ExceededLevel {
 [[nodiscard]] double exceedance(const Disturbance& disturbance, double level_v);
 
 /// The distribution on a grid by direct convolution; each amplitude is split over the two nearest
-/// bins so that the mean stays, which errs on the safe side by at most theta K step^2 / 8.
+/// bins so that the mean stays. The split adds variance, so that levels come out too large by up to
+/// theta K step^2 / 8 (theta the saddle point), besides up to a step where the tail is a staircase.
 struct GridDistribution {
   double step_v = 0.0;
   Eigen::Index zero_index = 0;  ///< bin of 0 V
