@@ -16,16 +16,37 @@ namespace {
 using Complex = std::complex<double>;
 constexpr Complex kJ(0.0, 1.0);
 
-Complex value_at(const CtleReference& form, double f_hz) {
-  Complex h = (amplitude_db_to_ratio(form.dc_gain_db) + kJ * f_hz / form.f_z_hz) /
-              ((1.0 + kJ * f_hz / form.f_p1_hz) * (1.0 + kJ * f_hz / form.f_p2_hz));
-  if (form.low_frequency) {
-    h *= (amplitude_db_to_ratio(form.low_frequency->dc_gain_db) +
-          kJ * f_hz / form.low_frequency->f_lf_hz) /
-         (1.0 + kJ * f_hz / form.low_frequency->f_lf_hz);
-  }
-  return h;
+/// (gain + jf/zero) / (1 + jf/pole), written out: a complex division otherwise looks after infinities.
+Complex section(double gain, double zero_turn, double pole_turn) {
+  const double scale = 1.0 / (1.0 + pole_turn * pole_turn);
+  return {(gain + zero_turn * pole_turn) * scale, (zero_turn - gain * pole_turn) * scale};
 }
+Complex times(Complex a, Complex b) {
+  return {a.real() * b.real() - a.imag() * b.imag(), a.real() * b.imag() + a.imag() * b.real()};
+}
+
+/// The reference form with its decibels converted once.
+class ReferenceCurve {
+ public:
+  explicit ReferenceCurve(const CtleReference& form)
+      : form_(form), dc_gain_(amplitude_db_to_ratio(form.dc_gain_db)) {
+    if (form.low_frequency) low_gain_ = amplitude_db_to_ratio(form.low_frequency->dc_gain_db);
+  }
+  [[nodiscard]] Complex at(double f_hz) const {
+    const Complex h = times(section(dc_gain_, f_hz / form_.f_z_hz, f_hz / form_.f_p1_hz),
+                            section(1.0, 0.0, f_hz / form_.f_p2_hz));
+    if (!form_.low_frequency) return h;
+    const double turn = f_hz / form_.low_frequency->f_lf_hz;
+    return times(h, section(low_gain_, turn, turn));
+  }
+
+ private:
+  CtleReference form_;
+  double dc_gain_;
+  double low_gain_ = 1.0;
+};
+
+Complex value_at(const CtleReference& form, double f_hz) { return ReferenceCurve(form).at(f_hz); }
 
 Complex value_at(const CtleZerosPoles& form, double f_hz) {
   Complex h = form.gain;
@@ -86,8 +107,9 @@ Eigen::VectorXcd response(const CtleState& state, const Eigen::VectorXd& frequen
     const MeasuredCurve curve(*measured);
     for (Eigen::Index i = 0; i < out.size(); ++i) out[i] = gain * curve.at(frequencies_hz[i]);
   } else if (const auto* reference = std::get_if<CtleReference>(&state.response)) {
+    const ReferenceCurve curve(*reference);
     for (Eigen::Index i = 0; i < out.size(); ++i) {
-      out[i] = gain * value_at(*reference, frequencies_hz[i]);
+      out[i] = gain * curve.at(frequencies_hz[i]);
     }
   } else {
     const auto& listed = std::get<CtleZerosPoles>(state.response);

@@ -14,11 +14,12 @@ void require_one_grid(const ReceivedSpectrum& a, const ReceivedSpectrum& b) {
   }
 }
 
-PulseResponse record_of(const ReceivedSpectrum& spectrum, const Eigen::VectorXcd* filter) {
+PulseResponse record_of(const ReceivedSpectrum& spectrum, const Eigen::VectorXcd* filter,
+                        RecordTransform& transform) {
   return PulseResponse(
-      filter != nullptr && !spectrum.at_slicer
-          ? real_record(spectrum.values.cwiseProduct(*filter), spectrum.num_samples)
-          : real_record(spectrum.values, spectrum.num_samples),
+      transform.record(filter != nullptr && !spectrum.at_slicer
+                           ? spectrum.values.cwiseProduct(*filter).eval()
+                           : spectrum.values),
       spectrum.samples_per_ui, spectrum.ui_s);
 }
 
@@ -33,13 +34,14 @@ std::vector<StatePulses> state_pulses(const Receiver& receiver, const ReceivedSp
   Eigen::VectorXcd noise_filter = Eigen::VectorXcd::Ones(f_hz.size());
   if (receiver.bandwidth_hz) noise_filter = noise_filter_response(*receiver.bandwidth_hz, f_hz);
 
+  RecordTransform transform(victim.num_samples);
   std::vector<StatePulses> states;
   states.reserve(receiver.ctle.size());
   for (const CtleState& state : receiver.ctle) {
     const Eigen::VectorXcd filter = noise_filter.cwiseProduct(response(state, f_hz));
-    StatePulses pulses{record_of(victim, &filter), {}, receiver.noise_rms_v.value_or(0.0)};
+    StatePulses pulses{record_of(victim, &filter, transform), {}, receiver.noise_rms_v.value_or(0.0)};
     for (const ReceivedSpectrum& aggressor : aggressors) {
-      pulses.aggressors.push_back(record_of(aggressor, &filter));
+      pulses.aggressors.push_back(record_of(aggressor, &filter, transform));
     }
     if (receiver.noise_density_v2_per_hz) {
       pulses.noise_v =
@@ -50,7 +52,10 @@ std::vector<StatePulses> state_pulses(const Receiver& receiver, const ReceivedSp
   return states;
 }
 
-PulseResponse input_pulse(const ReceivedSpectrum& victim) { return record_of(victim, nullptr); }
+PulseResponse input_pulse(const ReceivedSpectrum& victim) {
+  RecordTransform transform(victim.num_samples);
+  return record_of(victim, nullptr, transform);
+}
 
 double peak_input_v(const FirLimits& limits, const Eigen::VectorXd& taps,
                     const PulseResponse& input) {

@@ -26,6 +26,21 @@ TEST(Fft, EqualsTheDefiningSumForAnyLength) {
   }
 }
 
+TEST(Fft, OneTransformServesManyRecords) {
+  for (const int n : {1, 2, 15, 64}) {
+    RecordTransform transform(n);
+    const Eigen::VectorXd first = Eigen::VectorXd::LinSpaced(n, -1.0, 2.0);
+    const Eigen::VectorXd second = first.cwiseAbs2();
+    for (const Eigen::VectorXd& x : {first, second, first}) {
+      const Eigen::VectorXd back = transform.record(real_spectrum(x));
+      // Rounding: n * eps * sum |x|.
+      EXPECT_LE((back - x).lpNorm<Eigen::Infinity>(), n * 2.3e-16 * x.lpNorm<1>() * 4) << n;
+    }
+  }
+  RecordTransform transform(8);
+  EXPECT_THROW((void)transform.record(Eigen::VectorXcd::Zero(4)), std::invalid_argument);
+}
+
 TEST(Fft, QuickSizesHoldNoPrimeAboveFive) {
   EXPECT_EQ(quick_transform_size(1), 1);
   EXPECT_EQ(quick_transform_size(7), 8);

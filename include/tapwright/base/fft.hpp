@@ -2,6 +2,7 @@
 // Real transforms of a whole record; a thin coat over Eigen's FFT module.
 
 #include <Eigen/Core>
+#include <memory>
 
 namespace tapwright {
 
@@ -14,6 +15,23 @@ namespace tapwright {
 ///
 /// Shape: spectrum is (n / 2 + 1). Errors: std::invalid_argument on any other size.
 [[nodiscard]] Eigen::VectorXd real_record(const Eigen::VectorXcd& spectrum, Eigen::Index n);
+
+/// The same inverse for many records of one length: factors are computed once. For one thread.
+///
+/// Errors: as real_record, thrown by the call whose argument is at fault.
+class RecordTransform {
+ public:
+  explicit RecordTransform(Eigen::Index n);
+  ~RecordTransform();
+  RecordTransform(const RecordTransform&) = delete;
+  RecordTransform& operator=(const RecordTransform&) = delete;
+  [[nodiscard]] Eigen::VectorXd record(const Eigen::VectorXcd& spectrum);
+
+ private:
+  struct Plan;
+  Eigen::Index n_;
+  std::unique_ptr<Plan> plan_;
+};
 
 /// The least integer >= n of the form 2^a 3^b 5^c, for which transforms are quick.
 [[nodiscard]] Eigen::Index quick_transform_size(Eigen::Index n);
