@@ -50,7 +50,9 @@ double fallback_step(const Cumulant& cumulant) {
   return std::max(kFineStepV, range_v / kMaxBins);
 }
 
-GridDistribution grid_of(const Cumulant& cumulant, double step_v) {
+}  // namespace
+
+GridDistribution grid_distribution(const Cumulant& cumulant, double step_v) {
   if (!(step_v > 0.0)) {
     throw std::invalid_argument("grid_distribution: the step must be > 0");
   }
@@ -106,14 +108,13 @@ GridDistribution grid_of(const Cumulant& cumulant, double step_v) {
   return grid;
 }
 
-}  // namespace
-
 double exceeded_level_v(const Disturbance& disturbance, double probability) {
   require_tail(probability);
   const Cumulant cumulant(disturbance);
   if (!(cumulant.variance_v2() > 0.0)) return 0.0;
   if (const auto located = locate(cumulant, probability)) return located->level_v;
-  const double grid_v = grid_of(cumulant, fallback_step(cumulant)).exceeded_level_v(probability);
+  const double grid_v =
+      grid_distribution(cumulant, fallback_step(cumulant)).exceeded_level_v(probability);
   // Without noise nothing lies beyond the worst case; the split's spread must not say so.
   return cumulant.sigma_v() > 0.0 ? grid_v : std::min(grid_v, cumulant.worst_v());
 }
@@ -162,11 +163,11 @@ double exceedance(const Disturbance& disturbance, double level_v) {
         cumulant, theta, TailContour::period_for(theta, at, std::min(rough, 0.5)), kMaxPoints);
     if (contour) return std::clamp(contour->exceedance(level_v), 0.0, 0.5);
   }
-  return grid_of(cumulant, fallback_step(cumulant)).exceedance(level_v);
+  return grid_distribution(cumulant, fallback_step(cumulant)).exceedance(level_v);
 }
 
 GridDistribution grid_distribution(const Disturbance& disturbance, double step_v) {
-  return grid_of(Cumulant(disturbance), step_v);
+  return grid_distribution(Cumulant(disturbance), step_v);
 }
 
 double GridDistribution::exceedance(double level_v) const {

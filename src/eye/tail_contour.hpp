@@ -94,4 +94,7 @@ class TailContour {
   std::vector<double> imag_;
 };
 
+/// As grid_distribution of the disturbance that the cumulant stands for.
+[[nodiscard]] GridDistribution grid_distribution(const Cumulant& cumulant, double step_v);
+
 }  // namespace tapwright

@@ -3,7 +3,6 @@
 
 #include <Eigen/Core>
 #include <optional>
-#include <vector>
 
 #include "tapwright/eye/eye_model.hpp"
 
@@ -11,33 +10,42 @@ namespace tapwright {
 
 /// One UI around the sampling instant, DFE unchanged.
 ///
-/// Shape:  error_ratio and density are (num levels, num phases); phases_ui is (num phases),
-/// relative
-///         to t_s; levels_v is (num levels), slicer threshold or voltage, evenly spaced, symmetric.
-/// Units:  error_ratio(v, phase) is the probability that a slicer with its threshold v volts off
-/// the
-///         middle of an inner eye decides wrongly between that eye's two levels; density is the
-///         probability that the received voltage lies in the level's bin.
-/// Limits: independent symbols.
+/// Shape:  one_sided, error_ratio and density are (num levels, num phases); phases_ui is (num
+///         phases), relative to t_s; levels_v is (num levels), evenly spaced, symmetric about 0.
+/// Units:  volts, UI, probabilities.
+/// Limits: independent symbols, whatever the line code. Tails are relative to 1e-3 or better down
+/// to
+///         1e-18. Clock jitter is averaged over whole samples.
 struct WholeEye {
   Eigen::VectorXd levels_v;
   Eigen::VectorXd phases_ui;
-  Eigen::MatrixXd error_ratio;
-  Eigen::MatrixXd density;
   Eigen::Index sampling_index = 0;  ///< column of t_s
+  /// P(X > signal - v): with the threshold v above the middle of an inner eye, how often the symbol
+  /// above it is taken for the one below.
+  Eigen::MatrixXd one_sided;
+  /// How often that slicer is wrong about either of its two symbols: the mean of one_sided at v and
+  /// at -v.
+  Eigen::MatrixXd error_ratio;
+  /// Probability that the received voltage lies in the level's bin, all symbols equally likely.
+  Eigen::MatrixXd density;
 
-  /// Half the eye's height at an error ratio per phase; negative where closed.
+  /// The contour of an error probability: half the eye's height per phase, signal - N(P), negative
+  /// where closed; empty entries (NaN) where it lies outside the levels.
   [[nodiscard]] Eigen::VectorXd contour_v(double one_sided_probability) const;
-  /// error_ratio at the threshold 0 over the phases, and at t_s over the thresholds.
+  /// error_ratio with the threshold in the middle, over the phases; and at t_s, over the
+  /// thresholds.
   [[nodiscard]] Eigen::VectorXd bathtub_over_phase() const;
   [[nodiscard]] Eigen::VectorXd bathtub_over_level() const;
 };
 
 struct WholeEyeGrid {
   int num_levels = 1024;
-  std::optional<double> max_level_v;  ///< none = wide enough for every level and 8 sigma
+  /// Half the range of levels; none = wide enough for all but about 1e-9 of what is received.
+  std::optional<double> max_level_v;
 };
 
+/// Errors: std::invalid_argument when the settings do not fit the model, num_levels < 2 or
+///         max_level_v is not > 0.
 [[nodiscard]] WholeEye whole_eye(const EyeModel& model, const Settings& settings,
                                  const WholeEyeGrid& grid = {});
 
