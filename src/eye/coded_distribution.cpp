@@ -1,10 +1,10 @@
 #include "tapwright/eye/coded_distribution.hpp"
 
 #include <algorithm>
-#include <boost/math/tools/minima.hpp>
 #include <boost/math/tools/toms748_solve.hpp>
 #include <cmath>
 #include <complex>
+#include <map>
 #include <numbers>
 #include <optional>
 #include <stdexcept>
@@ -13,13 +13,13 @@
 #include <vector>
 
 #include "tapwright/base/normal.hpp"
+#include "tapwright/eye/coded_worst_case.hpp"
 
 namespace tapwright {
 namespace {
 
-constexpr int kLanes = 8;                   // points of the contour in one pass
-constexpr Eigen::Index kMostPoints = 4096;  // of the contour; beyond, the grid is quicker
-constexpr double kMostExponent = 600.0;     // exp of it and of minus it are far from the limits
+constexpr int kLanes = 8;                // points of the contour in one pass
+constexpr double kMostExponent = 600.0;  // exp of it and of minus it are far from the limits
 
 void check(const CodedDisturbance& disturbance) {
   if (disturbance.main_index < 0 || disturbance.main_index >= disturbance.row.size()) {
@@ -380,174 +380,209 @@ Lanes Moments::ratios(double step, Eigen::Index first) const {
   return total;
 }
 
-/// ln P(X > x) by the trapezoid rule on the line through theta; the points don't depend on x.
-class Contour {
- public:
-  /// `log_inverse` is a bound on ln(1 / P) at the levels to come. Empty where noise is too little.
-  static std::optional<Contour> through(Moments& moments, double theta, double log_inverse,
-                                        double sigma_v) {
-    Contour out;
-    const double near = 0.05 * theta;
-    const double below = moments.set_theta(theta - near);
-    const double above = moments.set_theta(theta + near);
-    out.k_ = moments.set_theta(theta);
-    out.theta_ = theta;
-    const double variance = std::max(0.0, (above - 2.0 * out.k_ + below) / (near * near));
-    // What the rule adds is P at x -+ the period, tilted: below e^-17 of P on the one side; on the
-    // other, eight standard deviations into the tilted distribution.
-    const double period = std::max((log_inverse + 17.0) / theta, 8.0 * std::sqrt(variance));
-    out.step_ = 2.0 * std::numbers::pi / period;
-    // The noise alone pushes the integrand below 1e-9 of its start from there on.
-    const double end = std::sqrt(2.0 * std::log(1e9)) / sigma_v / out.step_;
-    if (!std::isfinite(out.k_) || !std::isfinite(period) ||
-        !(end < static_cast<double>(kMostPoints))) {
-      return std::nullopt;
-    }
-    for (Eigen::Index m = 0; static_cast<double>(m) <= end; m += kLanes) {
-      const Lanes lanes = moments.ratios(out.step_, m);
-      for (int l = 0; l < kLanes; ++l) {
-        const std::complex<double> z(theta, out.step_ * static_cast<double>(m + l));
-        out.terms_.push_back(std::complex<double>(lanes.re[l], lanes.im[l]) / z *
-                             (m + l == 0 ? 0.5 : 1.0));
-      }
-    }
-    return out;
-  }
+/// ln P(X > x) by the trapezoid rule on the line through theta; its points don't depend on x.
+struct Contour {
+  double theta = 0.0;
+  double k = 0.0;  // K(theta)
+  double step = 0.0;
+  std::vector<std::complex<double>> terms;  // M(z) / (z e^K), the first one halved
 
   [[nodiscard]] double log_exceedance(double x) const {
     double sum = 0.0;
     // The angle of every 32nd term is computed, those between turn on from it.
-    const std::complex<double> turn = std::polar(1.0, -step_ * x);
+    const std::complex<double> turn = std::polar(1.0, -step * x);
     std::complex<double> angle = 1.0;
-    for (std::size_t m = 0; m < terms_.size(); ++m) {
-      angle = m % 32 == 0 ? std::polar(1.0, -step_ * x * static_cast<double>(m)) : angle * turn;
-      sum += terms_[m].real() * angle.real() - terms_[m].imag() * angle.imag();
+    for (std::size_t m = 0; m < terms.size(); ++m) {
+      angle = m % 32 == 0 ? std::polar(1.0, -step * x * static_cast<double>(m)) : angle * turn;
+      sum += terms[m].real() * angle.real() - terms[m].imag() * angle.imag();
     }
-    return k_ - theta_ * x + std::log(sum * step_ / std::numbers::pi);
+    return k - theta * x + std::log(sum * step / std::numbers::pi);
   }
-  [[nodiscard]] double theta() const { return theta_; }
-  [[nodiscard]] double k() const { return k_; }
-
- private:
-  double theta_ = 0.0;
-  double k_ = 0.0;
-  double step_ = 0.0;
-  std::vector<std::complex<double>> terms_;
 };
 
-struct Spread {
-  double mean_v = 0.0;
-  double deviation_v = 0.0;
-};
-
-double reach_v(const CodedDisturbance& d) { return d.row.lpNorm<1>() + d.others.worst_v(); }
-
-// From K near 0, where it is mean theta + variance theta^2 / 2; a rough measure is all that's used.
-Spread spread_of(Moments& moments, const CodedDisturbance& disturbance) {
-  const double theta = 0.01 / (reach_v(disturbance) + disturbance.others.sigma_v);
-  const double above = moments.set_theta(theta);
-  const double below = moments.set_theta(-theta);
-  return {(above - below) / (2.0 * theta), std::sqrt(std::max(0.0, above + below)) / theta};
-}
-
-// The least of a function with one minimum over theta > 0, to a few percent of theta: the contour
-// may lie anywhere near. Empty where it falls for ever (a bounded sum has no saddle point there).
-template <class Cost>
-std::optional<double> best_theta(double guess, Cost cost) {
-  double low = guess / 4.0;
-  double high = guess * 4.0;
-  double at_low = cost(low);
-  double at_high = cost(high);
-  const double at_guess = cost(guess);
-  for (double at = at_guess; at_high < at; at_high = cost(high)) {
-    at = at_high;
-    high *= 4.0;
-    if (!(high < 1e6 * guess)) return std::nullopt;
-  }
-  for (double at = at_guess; at_low < at; at_low = cost(low)) {
-    at = at_low;
-    low /= 4.0;
-    if (!(low > 1e-6 * guess)) return std::nullopt;
-  }
-  const auto [u, value] = boost::math::tools::brent_find_minima(
-      [&](double v) { return cost(std::exp(v)); }, std::log(low), std::log(high), 6);
-  return std::exp(u);
-}
-
-CodedGrid fallback_grid(const LineCode& code, const CodedDisturbance& disturbance,
-                        double deviation_v) {
-  const double range = 2.0 * reach_v(disturbance);
-  return coded_grid(code, disturbance,
-                    range > 0.0 ? std::max(deviation_v / 500.0, range / 65536.0) : 1.0);
+double reach_v(const CodedDisturbance& d) {
+  return d.row.lpNorm<1>() - std::abs(d.row[d.main_index]) + d.others.worst_v();
 }
 
 }  // namespace
 
-double exceeded_level_v(const LineCode& code, const CodedDisturbance& disturbance,
-                        double probability) {
-  check(disturbance);
-  check_probability(probability);
-  const double sigma_v = disturbance.others.sigma_v;
-  if (reach_v(disturbance) == 0.0) return sigma_v * gaussian_quantile_of_tail(probability);
-  Moments moments(code, disturbance);
-  const Spread spread = spread_of(moments, disturbance);
-  const double log_inverse = -std::log(probability);
-  if (sigma_v > 0.0) {
-    // The Chernoff bound: N <= (K + ln(1/P)) / theta for every theta, least at the saddle point.
-    const auto bound = [&](double theta) {
-      return (moments.set_theta(theta) + log_inverse) / theta;
-    };
-    const std::optional<double> theta =
-        best_theta(gaussian_quantile_of_tail(probability) / spread.deviation_v, bound);
-    if (theta) {
-      if (const auto contour = Contour::through(moments, *theta, log_inverse, sigma_v)) {
-        double high = (contour->k() + log_inverse) / *theta;
-        double width = spread.deviation_v;
-        const auto excess = [&](double x) { return contour->log_exceedance(x) + log_inverse; };
-        const double at_high = excess(high);
-        double low = high - 2.0 / *theta;
-        double at_low = excess(low);
-        for (int i = 0; i < 40 && at_low < 0.0; ++i, width *= 1.5) {
-          low -= width;
-          at_low = excess(low);
-        }
-        if (at_low >= 0.0 && at_high <= 0.0) {
-          std::uintmax_t rounds = 60;
-          const auto [a, b] = boost::math::tools::toms748_solve(
-              excess, low, high, at_low, at_high, boost::math::tools::eps_tolerance<double>(40),
-              rounds);
-          return 0.5 * (a + b);
-        }
+/// Lines theta_0 ratio^k, computed when first asked for.
+class CodedTail::Ladder {
+ public:
+  Ladder(const LineCode& code, CodedDisturbance disturbance)
+      : code_(code), disturbance_(std::move(disturbance)) {
+    check(disturbance_);
+    given_sigma_v_ = disturbance_.others.sigma_v;
+    reach_v_ = reach_v(disturbance_);
+    if (reach_v_ == 0.0) return;
+    moments_.emplace(code_, disturbance_);
+    // K is mean theta + variance theta^2 / 2 near 0; a rough measure is all that's used.
+    const double theta = 0.01 / (reach_v_ + given_sigma_v_);
+    const double above = moments_->set_theta(theta);
+    const double below = moments_->set_theta(-theta);
+    mean_v_ = (above - below) / (2.0 * theta);
+    deviation_v_ = std::sqrt(std::max(0.0, above + below)) / theta;
+    // A sum that hardly varies is all mean; noise of a share of its size then ends the line.
+    const double least_v = std::max(0.01 * deviation_v_, 1e-6 * reach_v_);
+    if (given_sigma_v_ < least_v) {
+      // Additions that a grid takes, per 1 / step.
+      double num_words = 0.0;
+      for (const LineCode::Section& section : code_.sections()) {
+        num_words += static_cast<double>(section.words.cols());
+      }
+      const double work_v =
+          2.0 * static_cast<double>(disturbance_.row.size()) * num_words * reach_v_;
+      const double step_v = std::max(work_v / 1e8, deviation_v_ / 4000.0);
+      if (step_v <= deviation_v_ / 1000.0) grid_ = coded_grid(code_, disturbance_, step_v);
+    }
+    disturbance_.others.sigma_v = std::max(given_sigma_v_, least_v);
+    deviation_v_ = std::max(deviation_v_, least_v);
+  }
+
+  [[nodiscard]] bool only_noise() const { return reach_v_ == 0.0; }
+  [[nodiscard]] const std::optional<CodedGrid>& grid() const { return grid_; }
+  [[nodiscard]] double given_sigma_v() const { return given_sigma_v_; }
+  [[nodiscard]] bool has_more_noise() const { return disturbance_.others.sigma_v > given_sigma_v_; }
+  [[nodiscard]] double deviation_v() const { return deviation_v_; }
+  [[nodiscard]] double mean_v() const { return mean_v_; }
+  /// To be taken off a level found on a line.
+  [[nodiscard]] double correction_v(double theta) const {
+    const double sigma_v = disturbance_.others.sigma_v;
+    return 0.5 * theta * (sigma_v * sigma_v - given_sigma_v_ * given_sigma_v_);
+  }
+  /// What nothing but noise can pass.
+  [[nodiscard]] double worst_v() const {
+    return CodedIsi(code_, disturbance_.row.size(), disturbance_.main_index)
+               .worst(disturbance_.row) +
+           disturbance_.others.worst_v();
+  }
+
+  /// The line where `cost(theta, K(theta))`, which has one minimum, is least on the ladder.
+  template <class Cost>
+  const Contour& best(double guess_theta, Cost cost) {
+    const auto cost_of = [&](int rung) { return cost(theta_of(rung), k_of(rung)); };
+    int rung =
+        std::max(kLowestRung,
+                 static_cast<int>(std::lround(std::log(guess_theta * deviation_v_) / kLogRatio)));
+    double here = cost_of(rung);
+    const int direction = cost_of(rung + 1) < here ? 1 : -1;
+    while (rung + direction >= kLowestRung) {
+      const double next = cost_of(rung + direction);
+      if (!(next < here)) break;
+      here = next;
+      rung += direction;
+    }
+    return contour(rung);
+  }
+
+ private:
+  static constexpr double kLogRatio = 0.26236426446749106;  // ln 1.3
+  static constexpr int kLowestRung = -3;  // half over the deviation serves all of the middle
+
+  [[nodiscard]] double theta_of(int rung) const {
+    return std::exp(kLogRatio * rung) / deviation_v_;
+  }
+  double k_of(int rung) {
+    const auto [it, fresh] = k_.try_emplace(rung, 0.0);
+    if (fresh) {
+      it->second = moments_->set_theta(theta_of(rung));
+    }
+    return it->second;
+  }
+  const Contour& contour(int rung) {
+    const auto found = contours_.find(rung);
+    if (found != contours_.end()) return found->second;
+    Contour out;
+    out.theta = theta_of(rung);
+    const double slope_above = (k_of(rung + 1) - k_of(rung)) / (theta_of(rung + 1) - out.theta);
+    const double slope_below = (k_of(rung) - k_of(rung - 1)) / (out.theta - theta_of(rung - 1));
+    const double variance = std::max(
+        0.0, 2.0 * (slope_above - slope_below) / (theta_of(rung + 1) - theta_of(rung - 1)));
+    // What the rule adds is P at x -+ the period, tilted. On the one side that is below e^-17 of P
+    // at the level K' whose saddle point this line is, and below e^-14 at those the next lines
+    // serve (P is 1 / (theta s sqrt(2 pi)) below its Chernoff bound: 5 covers that); on the other,
+    // nine standard deviations into the tilted distribution.
+    const double level_v = 0.5 * (slope_above + slope_below);
+    const double log_inverse = std::max(0.0, out.theta * level_v - k_of(rung)) + 5.0;
+    const double period = std::max((log_inverse + 17.0) / out.theta, 9.0 * std::sqrt(variance));
+    out.step = 2.0 * std::numbers::pi / period;
+    // The noise alone pushes the integrand below 1e-9 of its start from there on.
+    const double end = std::sqrt(2.0 * std::log(1e9)) / disturbance_.others.sigma_v / out.step;
+    out.k = k_of(rung);
+    moments_->set_theta(out.theta);
+    for (Eigen::Index m = 0; static_cast<double>(m) <= end; m += kLanes) {
+      const Lanes lanes = moments_->ratios(out.step, m);
+      for (int l = 0; l < kLanes; ++l) {
+        const std::complex<double> z(out.theta, out.step * static_cast<double>(m + l));
+        out.terms.push_back(std::complex<double>(lanes.re[l], lanes.im[l]) / z *
+                            (m + l == 0 ? 0.5 : 1.0));
       }
     }
+    return contours_.emplace(rung, std::move(out)).first->second;
   }
-  return fallback_grid(code, disturbance, spread.deviation_v).exceeded_level_v(probability);
+
+  const LineCode code_;
+  CodedDisturbance disturbance_;  // with the noise raised
+  double given_sigma_v_ = 0.0;
+  double reach_v_ = 0.0;
+  double mean_v_ = 0.0;
+  double deviation_v_ = 0.0;
+  std::optional<CodedGrid> grid_;
+  std::optional<Moments> moments_;
+  std::map<int, double> k_;
+  std::map<int, Contour> contours_;
+};
+
+CodedTail::CodedTail(const LineCode& code, CodedDisturbance disturbance)
+    : ladder_(std::make_unique<Ladder>(code, std::move(disturbance))) {}
+CodedTail::CodedTail(CodedTail&&) noexcept = default;
+CodedTail& CodedTail::operator=(CodedTail&&) noexcept = default;
+CodedTail::~CodedTail() = default;
+
+double CodedTail::exceeded_level_v(double probability) {
+  check_probability(probability);
+  const double quantile = gaussian_quantile_of_tail(probability);
+  if (ladder_->only_noise()) return ladder_->given_sigma_v() * quantile;
+  if (ladder_->grid()) return ladder_->grid()->exceeded_level_v(probability);
+  const double log_inverse = -std::log(probability);
+  // The Chernoff bound: N <= (K + ln(1/P)) / theta for every theta, least at the saddle point.
+  const Contour& contour =
+      ladder_->best(quantile / ladder_->deviation_v(),
+                    [&](double theta, double k) { return (k + log_inverse) / theta; });
+  const auto excess = [&](double x) { return contour.log_exceedance(x) + log_inverse; };
+  const double high = (contour.k + log_inverse) / contour.theta;
+  double low = high - 3.0 / contour.theta;
+  for (int i = 0; i < 60 && excess(low) < 0.0; ++i) low -= ladder_->deviation_v();
+  std::uintmax_t rounds = 60;
+  const auto [a, b] = boost::math::tools::toms748_solve(
+      excess, low, high, boost::math::tools::eps_tolerance<double>(40), rounds);
+  const double level_v = 0.5 * (a + b);
+  if (!ladder_->has_more_noise()) return level_v;
+  return std::min(level_v - ladder_->correction_v(contour.theta),
+                  ladder_->worst_v() + quantile * ladder_->given_sigma_v());
+}
+
+double CodedTail::exceedance(double level_v) {
+  if (ladder_->only_noise()) {
+    return ladder_->given_sigma_v() > 0.0 ? gaussian_tail(level_v / ladder_->given_sigma_v())
+                                          : (level_v < 0.0 ? 1.0 : 0.0);
+  }
+  if (ladder_->grid()) return ladder_->grid()->exceedance(level_v);
+  const double out = (level_v - ladder_->mean_v()) / ladder_->deviation_v();
+  const Contour& contour =
+      ladder_->best(std::max(out, 0.5) / ladder_->deviation_v(),
+                    [&](double theta, double k) { return k - theta * level_v - std::log(theta); });
+  const double log_p = contour.log_exceedance(level_v + ladder_->correction_v(contour.theta));
+  return log_p < 0.0 ? std::exp(log_p) : (out < 0.0 ? 1.0 : 0.0);
+}
+
+double exceeded_level_v(const LineCode& code, const CodedDisturbance& disturbance,
+                        double probability) {
+  return CodedTail(code, disturbance).exceeded_level_v(probability);
 }
 
 double exceedance(const LineCode& code, const CodedDisturbance& disturbance, double level_v) {
-  check(disturbance);
-  const double sigma_v = disturbance.others.sigma_v;
-  if (reach_v(disturbance) == 0.0) {
-    return sigma_v > 0.0 ? gaussian_tail(level_v / sigma_v) : (level_v < 0.0 ? 1.0 : 0.0);
-  }
-  Moments moments(code, disturbance);
-  const Spread spread = spread_of(moments, disturbance);
-  if (sigma_v > 0.0) {
-    const double out = (level_v - spread.mean_v) / spread.deviation_v;
-    const auto cost = [&](double theta) {
-      return moments.set_theta(theta) - theta * level_v - std::log(theta);
-    };
-    const std::optional<double> theta = best_theta(std::max(out, 1.0) / spread.deviation_v, cost);
-    if (theta) {
-      // P is below its Chernoff bound by about theta times a deviation: allow for that much.
-      const double log_inverse = std::max(0.0, *theta * level_v - moments.set_theta(*theta)) + 5.0;
-      if (const auto contour = Contour::through(moments, *theta, log_inverse, sigma_v)) {
-        const double log_p = contour->log_exceedance(level_v);
-        if (std::isfinite(log_p)) return std::min(1.0, std::exp(log_p));
-      }
-    }
-  }
-  return fallback_grid(code, disturbance, spread.deviation_v).exceedance(level_v);
+  return CodedTail(code, disturbance).exceedance(level_v);
 }
 
 CodedMoments coded_moments(const LineCode& code, const Eigen::VectorXd& row,
