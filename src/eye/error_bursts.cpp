@@ -6,6 +6,8 @@
 #include <string>
 #include <vector>
 
+#include "eye/instant.hpp"
+
 namespace tapwright {
 namespace {
 
@@ -133,6 +135,25 @@ ErrorBursts error_bursts(const std::function<double(double)>& exceedance, double
   out.longer_probability += alive;
   out.error_ratio = std::min(0.5, out.start_probability * out.mean_errors);
   return out;
+}
+
+std::optional<ErrorBursts> error_bursts(const EyeModel& model, const Settings& settings,
+                                        Eigen::Index max_length) {
+  require_fit(model, settings);
+  const DfeLimits& dfe = model.link.device.receiver.dfe;
+  const Eigen::Index reach = dfe.empty() ? 0 : dfe.back().position;
+  if (model.link.signal.levels != 2 || reach > kMostBurstTaps) return std::nullopt;
+  Eigen::VectorXd dfe_v = Eigen::VectorXd::Zero(reach);
+  for (std::size_t i = 0; i < dfe.size(); ++i) {
+    dfe_v[dfe[i].position - 1] = settings.dfe_v[static_cast<Eigen::Index>(i)];
+  }
+  const PlacedEye eye = place_eye(model, place_of(settings));
+  const LineCode code = code_of(model);
+  const Instant instant = instant_of(eye, eye.phases.front(), settings.fir, settings.dfe_v);
+  Tail tail(eye, code, instant, aggressors_at_error_ratio(eye, settings.fir));
+  return error_bursts([&](double level_v) { return std::min(1.0, tail.exceedance(level_v)); },
+                      instant.signal_v - model.link.device.receiver.sensitivity_v, dfe_v,
+                      max_length);
 }
 
 }  // namespace tapwright

@@ -5,7 +5,6 @@
 #include <stdexcept>
 #include <string>
 
-#include "tapwright/eye/coded_distribution.hpp"
 #include "tapwright/eye/coded_worst_case.hpp"
 
 namespace tapwright {
@@ -112,41 +111,29 @@ Disturbance disturbance_of(const PlacedEye& eye, const Instant& instant,
   return d;
 }
 
-namespace {
+namespace {}  // namespace
 
-/// N(P), or P(X > x), of one instant.
-class Side {
- public:
-  Side(const PlacedEye& eye, const LineCode& code, const Instant& instant,
-       const Eigen::VectorXd& aggressors_v)
-      : code_(&code) {
-    if (code.independent()) {
-      all_ = disturbance_of(eye, instant, aggressors_v);
-      return;
-    }
-    coded_.row = instant.residual.values;
-    coded_.main_index = instant.residual.main_index;
-    // Without the cursors: what does not follow the code.
-    Instant others = instant;
-    others.residual = {Eigen::VectorXd::Zero(1), 0};
-    coded_.others = disturbance_of(eye, others, aggressors_v);
+Tail::Tail(const PlacedEye& eye, const LineCode& code, const Instant& instant,
+           const Eigen::VectorXd& aggressors_v) {
+  if (code.independent()) {
+    independent_ = disturbance_of(eye, instant, aggressors_v);
+    return;
   }
-  [[nodiscard]] double level_v(double probability) const {
-    return code_->independent() ? exceeded_level_v(all_, probability)
-                                : exceeded_level_v(*code_, coded_, probability);
-  }
-  [[nodiscard]] double exceedance(double level_v) const {
-    return code_->independent() ? tapwright::exceedance(all_, level_v)
-                                : tapwright::exceedance(*code_, coded_, level_v);
-  }
+  // Without the cursors: what does not follow the code.
+  Instant others = instant;
+  others.residual = {Eigen::VectorXd::Zero(1), 0};
+  coded_.emplace(code, CodedDisturbance{instant.residual.values, instant.residual.main_index,
+                                        disturbance_of(eye, others, aggressors_v)});
+}
 
- private:
-  const LineCode* code_;
-  Disturbance all_;
-  CodedDisturbance coded_;
-};
+double Tail::exceeded_level_v(double probability) {
+  return coded_ ? coded_->exceeded_level_v(probability)
+                : tapwright::exceeded_level_v(independent_, probability);
+}
 
-}  // namespace
+double Tail::exceedance(double level_v) {
+  return coded_ ? coded_->exceedance(level_v) : tapwright::exceedance(independent_, level_v);
+}
 
 AtErrorRatio at_error_ratio(const PlacedEye& eye, const LineCode& code, Eigen::Index offset_samples,
                             const Eigen::VectorXd& fir, const Eigen::VectorXd& dfe_v,
@@ -162,7 +149,7 @@ AtErrorRatio at_error_ratio(const PlacedEye& eye, const LineCode& code, Eigen::I
   };
   const Instant here = instant_at(static_cast<double>(offset_samples));
   if (clock_samples == 0.0) {
-    const double noise_v = Side(eye, code, here, aggressors_v).level_v(probability);
+    const double noise_v = Tail(eye, code, here, aggressors_v).exceeded_level_v(probability);
     return {noise_v, 2.0 * (here.signal_v - noise_v - sensitivity_v)};
   }
 
@@ -172,7 +159,7 @@ AtErrorRatio at_error_ratio(const PlacedEye& eye, const LineCode& code, Eigen::I
   struct Node {
     double weight = 0.0;
     double signal_v = 0.0;
-    Side side;
+    Tail tail;
   };
   constexpr double kReach = 8.0;
   constexpr int kPerSigma = 2;
@@ -183,13 +170,13 @@ AtErrorRatio at_error_ratio(const PlacedEye& eye, const LineCode& code, Eigen::I
     const double sigmas = static_cast<double>(i) / kPerSigma;
     const Instant there = instant_at(static_cast<double>(offset_samples) + sigmas * clock_samples);
     const double weight = std::exp(-0.5 * sigmas * sigmas);
-    nodes.push_back({weight, there.signal_v, Side(eye, code, there, aggressors_v)});
+    nodes.push_back({weight, there.signal_v, Tail(eye, code, there, aggressors_v)});
     total += weight;
   }
   const auto error_ratio = [&](double half_v) {
     double sum = 0.0;
-    for (const Node& node : nodes) {
-      sum += node.weight / total * node.side.exceedance(node.signal_v - half_v);
+    for (Node& node : nodes) {
+      sum += node.weight / total * node.tail.exceedance(node.signal_v - half_v);
     }
     return sum;
   };

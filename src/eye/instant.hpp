@@ -5,6 +5,7 @@
 #include <optional>
 #include <vector>
 
+#include "tapwright/eye/coded_distribution.hpp"
 #include "tapwright/eye/distribution.hpp"
 #include "tapwright/eye/line_code.hpp"
 #include "tapwright/eye/placed_eye.hpp"
@@ -57,6 +58,19 @@ struct Instant {
 
 /// Samples on either side of t_s under the mask.
 [[nodiscard]] Eigen::Index mask_reach(const EyeModel& model);
+
+/// N(P) and P(X > x) of one instant: interference under the code, crosstalk, jitter, noise.
+class Tail {
+ public:
+  Tail(const PlacedEye& eye, const LineCode& code, const Instant& instant,
+       const Eigen::VectorXd& aggressors_v);
+  [[nodiscard]] double exceeded_level_v(double probability);
+  [[nodiscard]] double exceedance(double level_v);
+
+ private:
+  Disturbance independent_;
+  std::optional<CodedTail> coded_;
+};
 
 /// The level of disturbance on one side and the clear half height at the error ratio.
 struct AtErrorRatio {

@@ -3,6 +3,9 @@
 
 #include <Eigen/Core>
 #include <functional>
+#include <optional>
+
+#include "tapwright/eye/eye_model.hpp"
 
 namespace tapwright {
 
@@ -41,5 +44,13 @@ inline constexpr Eigen::Index kMostBurstTaps = 10;
 [[nodiscard]] ErrorBursts error_bursts(const std::function<double(double)>& exceedance,
                                        double main_v, const Eigen::VectorXd& dfe_v,
                                        Eigen::Index max_length = 64);
+
+/// The bursts of a setting: the tail is that of its interference, crosstalk, jitter and noise
+/// (under its line code, too), clock jitter left out.
+///
+/// Empty for more than two levels, or when the DFE reaches back more than kMostBurstTaps symbols.
+[[nodiscard]] std::optional<ErrorBursts> error_bursts(const EyeModel& model,
+                                                      const Settings& settings,
+                                                      Eigen::Index max_length = 64);
 
 }  // namespace tapwright
