@@ -2,13 +2,19 @@
 
 #include <algorithm>
 #include <cmath>
+#include <functional>
 #include <limits>
+#include <map>
 
 #include "tapwright/base/fft.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
+#include "tapwright/channel/capture.hpp"
 #include "tapwright/channel/line_model.hpp"
+#include "tapwright/channel/linear_fit.hpp"
+#include "tapwright/channel/lumped.hpp"
 #include "tapwright/channel/network_operations.hpp"
+#include "tapwright/channel/pattern.hpp"
 #include "tapwright/channel/ports.hpp"
 #include "tapwright/channel/touchstone.hpp"
 
@@ -67,19 +73,91 @@ std::optional<ReceivedSpectrum> read_pulse(const Section& pulse, const TimeGrid&
   return spectrum;
 }
 
+CaptureFormat read_format(const Section& record) {
+  CaptureFormat format;
+  if (!record.has("format")) return format;
+  const Section section = record.at("format");
+  static const std::map<std::string, double> kUnits = {{"s", 1.0},   {"ms", 1e-3},  {"us", 1e-6},
+                                                       {"ns", 1e-9}, {"ps", 1e-12}, {"fs", 1e-15},
+                                                       {"V", 1.0},   {"mV", 1e-3},  {"uV", 1e-6}};
+  const auto unit = [&](const char* key) {
+    return section.has(key) ? std::optional(kUnits.at(section.text(key))) : std::nullopt;
+  };
+  const auto column = [&](const char* key) {
+    return section.has(key) ? std::optional(section.integer(key)) : std::nullopt;
+  };
+  if (const auto ps = section.maybe("sample_interval_ps")) format.dt_s = ps_to_s(*ps);
+  format.time_unit_s = unit("time_unit");
+  format.value_unit_v = unit("value_unit");
+  format.value_column = column("value_column");
+  format.minus_column = column("minus_column");
+  return format;
+}
+
+std::optional<PulseResponse> fitted_pulse(const Section& record, const Capture& waveform,
+                                          const TimeGrid& grid) {
+  const Section section = record.at("pattern");
+  Pattern pattern;
+  if (section.value().is_array()) {
+    pattern = SymbolList{section.value().get<std::vector<double>>()};
+  } else {
+    const auto named = value_or_notes(section, pattern_named(section.text(), ""));
+    if (!named) return std::nullopt;
+    pattern = *named;
+  }
+  LinearFitOptions options;
+  options.symbol_rate_bd = 1.0 / grid.ui_s;
+  options.samples_per_ui = grid.samples_per_ui;
+  options.num_pre_ui = record.integer("pre_ui");
+  options.num_post_ui = record.integer("post_ui");
+  options.launch_v = mvppd_to_peak_v(record.number("at_swing_mvppd"));
+  std::optional<LinearFit> fit = value_or_notes(record, fit_pulse(waveform, pattern, options, ""));
+  if (!fit) return std::nullopt;
+  record.warning("the pulse was fitted with a signal-to-noise ratio of " + fixed(fit->snr_db, 1) +
+                 " dB, at " + significant(fit->symbol_rate_bd * 1e-9, 9) + " GBd");
+  return std::move(fit->pulse);
+}
+
+std::optional<ReceivedSpectrum> read_capture_of(const Section& channel, const TimeGrid& grid,
+                                                InputFiles& files) {
+  const char* const kind = channel.has("pulse_csv")  ? "pulse_csv"
+                           : channel.has("step_csv") ? "step_csv"
+                                                     : "waveform_csv";
+  const Section record = channel.at(kind);
+  const Section name = record.at("file");
+  const std::optional<std::string> text = files.read(name);
+  if (!text) return std::nullopt;
+  const std::optional<Capture> capture =
+      value_or_notes(name, parse_capture(*text, files.resolved(name.text()), read_format(record)));
+  if (!capture) return std::nullopt;
+  std::optional<PulseResponse> pulse;
+  if (channel.has("waveform_csv")) {
+    pulse = fitted_pulse(record, *capture, grid);
+  } else if (channel.has("pulse_csv")) {
+    const double launch_v = mvppd_to_peak_v(record.number("at_swing_mvppd"));
+    pulse = value_or_notes(record, pulse_from_pulse(*capture, grid, launch_v, ""));
+  } else {
+    pulse = value_or_notes(record,
+                           pulse_from_step(*capture, grid, mv_to_v(record.number("step_mv")), ""));
+  }
+  if (!pulse) return std::nullopt;
+  std::optional<ReceivedSpectrum> spectrum =
+      value_or_notes(record, received_spectrum(*pulse, grid, ""));
+  if (spectrum) spectrum->at_slicer = is_at_slicer(record, pulse->samples_per_ui());
+  return spectrum;
+}
+
 // ---- Networks and lines ---------------------------------------------------------------------
 
 /// A piece of a cascade: measured, or to be computed on whatever frequencies the cascade has.
 struct Piece {
   std::optional<Network> measured;
-  LineModel line;
-  double length_m = 0.0;
-  /// Two uncoupled lines driven differentially have the S-parameters of one between ports of half
-  /// the reference.
-  bool is_two_lines = false;
+  std::function<Network(const Eigen::VectorXd&)> modelled;
+  double delay_s = 0.0;  ///< of a modelled piece
 };
 
-std::optional<Piece> read_touchstone(const Section& section, InputFiles& files) {
+/// The two-port that a Touchstone file holds between the ports of its map.
+std::optional<Network> read_path(const Section& section, bool may_guess, InputFiles& files) {
   const Section name = section.at("file");
   const std::optional<std::string> text = files.read(name);
   if (!text) return std::nullopt;
@@ -91,17 +169,42 @@ std::optional<Piece> read_touchstone(const Section& section, InputFiles& files) 
     const Section ports = section.at("ports");
     map.in = ports.value().at("in").get<std::vector<int>>();
     map.out = ports.value().at("out").get<std::vector<int>>();
-  } else if (network->num_ports() != 2) {
-    section.error(
-        "the file has " + std::to_string(network->num_ports()) +
-        " ports, so key \"ports\" must say which look to the driver (\"in\") and which to "
-        "the receiver (\"out\")");
-    return std::nullopt;
+    return value_or_notes(ports, through_path(*network, map, ""));
   }
-  std::optional<Network> path = value_or_notes(section.has("ports") ? section.at("ports") : section,
-                                               through_path(*network, map, ""));
+  if (network->num_ports() != 2) {
+    const std::string found = "the file has " + std::to_string(network->num_ports()) + " ports";
+    if (!may_guess) {
+      section.error(found + "; crosstalk needs key \"ports\"");
+      return std::nullopt;
+    }
+    const auto maps = value_or_notes(section, guess_ports(*network, ""));
+    if (!maps) return std::nullopt;
+    if (maps->size() != 1) {
+      section.error(found + " and " + std::to_string(maps->size()) +
+                    " paths; key \"ports\" must say which one is meant");
+      return std::nullopt;
+    }
+    map = maps->front();
+  }
+  return value_or_notes(section, through_path(*network, map, ""));
+}
+
+std::optional<Piece> read_touchstone(const Section& section, bool is_victim, InputFiles& files) {
+  std::optional<Network> path = read_path(section, is_victim, files);
   if (!path) return std::nullopt;
-  return Piece{std::move(*path), {}, 0.0, false};
+  if (is_victim) adopt_here(section, check_polarity(*path, ""));
+  std::optional<Network> halves[2];
+  const char* const keys[2] = {"fixture_in", "fixture_out"};
+  for (int i = 0; i < 2; ++i) {
+    if (!section.has(keys[i])) continue;
+    halves[i] = read_path(section.at(keys[i]), true, files);
+    if (!halves[i]) return std::nullopt;
+  }
+  if (halves[0] || halves[1]) {
+    path = value_or_notes(section, without_fixture(*path, halves[0], halves[1], ""));
+    if (!path) return std::nullopt;
+  }
+  return Piece{std::move(path), {}, 0.0};
 }
 
 PhysicalLine read_dimensions(const Section& line) {
@@ -160,15 +263,58 @@ LineModel read_line_model(const Section& line) {
   return read_dimensions(line);
 }
 
-std::optional<Piece> read_line(const Section& line) {
-  Piece piece;
-  piece.line = read_line_model(line);
-  piece.length_m = line.number("length_m");
-  piece.is_two_lines =
-      line.has("dielectric") && !line.has("wire_pair") && line.value().at("pair").get<bool>();
-  const std::vector<Diagnostic> notes = check_line(piece.line, "");
+std::optional<Piece> read_line(const Section& line, double symbol_rate_bd) {
+  const LineModel model = read_line_model(line);
+  const double length_m = line.number("length_m");
+  const std::vector<Diagnostic> notes = check_line(model, "");
   adopt_here(line, notes);
   if (has_error(notes)) return std::nullopt;
+  // Two uncoupled lines driven differentially have the S-parameters of one of them between ports of
+  // half the reference.
+  const bool is_two_lines =
+      line.has("dielectric") && !line.has("wire_pair") && line.value().at("pair").get<bool>();
+  const double reference_ohm = is_two_lines ? kReferenceOhm / 2 : kReferenceOhm;
+  Piece piece;
+  piece.modelled = [=](const Eigen::VectorXd& frequencies_hz) {
+    Network network = line_network(model, length_m, frequencies_hz, reference_ohm);
+    network.reference_ohm.setConstant(kReferenceOhm);
+    return network;
+  };
+  piece.delay_s = line_delay_s(model, length_m, 0.5 * symbol_rate_bd);
+  return piece;
+}
+
+std::optional<Piece> read_lumped(const Section& list) {
+  Piece piece;
+  Ladder ladder;
+  const auto scaled = [](std::optional<double> value, double unit) {
+    return value ? std::optional(*value * unit) : std::nullopt;
+  };
+  for (const Section& item : list.items()) {
+    if (item.has("series")) {
+      const Section part = item.at("series");
+      ladder.push_back(SeriesElement{part.maybe("resistance_ohm").value_or(0.0),
+                                     nh_to_h(part.maybe("inductance_nh").value_or(0.0)),
+                                     scaled(part.maybe("capacitance_pf"), 1e-12)});
+    } else if (item.has("shunt")) {
+      const Section part = item.at("shunt");
+      ladder.push_back(ShuntElement{part.maybe("resistance_ohm"),
+                                    scaled(part.maybe("inductance_nh"), 1e-9),
+                                    pf_to_f(part.maybe("capacitance_pf").value_or(0.0))});
+    } else {
+      const Section part = item.at("section");
+      const double delay_s = ps_to_s(part.number("delay_ps"));
+      ladder.push_back(
+          LineSection{part.number("impedance_ohm"), delay_s, part.number("loss_db_at_1_ghz")});
+      piece.delay_s += delay_s;
+    }
+  }
+  const std::vector<Diagnostic> notes = check_ladder(ladder, "");
+  adopt_here(list, notes);
+  if (has_error(notes)) return std::nullopt;
+  piece.modelled = [=](const Eigen::VectorXd& frequencies_hz) {
+    return ladder_network(ladder, frequencies_hz, kReferenceOhm);
+  };
   return piece;
 }
 
@@ -195,7 +341,7 @@ Eigen::VectorXd cascade_frequencies_hz(const std::vector<Piece>& pieces, double 
   double last_hz = std::numeric_limits<double>::infinity();
   for (const Piece& piece : pieces) {
     if (!piece.measured) {
-      delay_s += line_delay_s(piece.line, piece.length_m, 0.5 * symbol_rate_bd);
+      delay_s += piece.delay_s;
       continue;
     }
     const Eigen::VectorXd& f = piece.measured->frequencies_hz;
@@ -221,13 +367,6 @@ Eigen::VectorXd cascade_frequencies_hz(const std::vector<Piece>& pieces, double 
   return Eigen::Map<const Eigen::VectorXd>(all.data(), static_cast<Eigen::Index>(all.size()));
 }
 
-Network modelled(const Piece& piece, const Eigen::VectorXd& frequencies_hz) {
-  Network network = line_network(piece.line, piece.length_m, frequencies_hz,
-                                 piece.is_two_lines ? kReferenceOhm / 2 : kReferenceOhm);
-  network.reference_ohm.setConstant(kReferenceOhm);
-  return network;
-}
-
 /// One two-port from the pieces.
 std::optional<Network> joined(const Section& section, std::vector<Piece> pieces,
                               double symbol_rate_bd) {
@@ -249,7 +388,7 @@ std::optional<Network> joined(const Section& section, std::vector<Piece> pieces,
       // Files on one grid follow it quietly when it is made finer; of others cascade() tells.
       const bool follows = piece.measured && piece.measured->frequencies_hz == finest_hz &&
                            finest_hz != frequencies_hz;
-      networks.push_back(!piece.measured ? modelled(piece, frequencies_hz)
+      networks.push_back(!piece.measured ? piece.modelled(frequencies_hz)
                          : follows       ? resampled(*piece.measured, frequencies_hz)
                                          : std::move(*piece.measured));
     }
@@ -263,17 +402,17 @@ std::optional<ReceivedSpectrum> read_network(const Section& channel,
   std::vector<Piece> pieces;
   bool ac_coupled = false;
   const auto add_touchstone = [&](const Section& section) {
-    const std::optional<Piece> piece = read_touchstone(section, files);
+    const std::optional<Piece> piece = read_touchstone(section, conditions.is_victim, files);
     if (!piece) return;
     ac_coupled = ac_coupled || section.value().at("ac_coupled").get<bool>();
     pieces.insert(pieces.end(), static_cast<std::size_t>(section.integer("repeat")), *piece);
   };
-  const auto add_line = [&](const Section& section) {
-    if (std::optional<Piece> piece = read_line(section)) pieces.push_back(std::move(*piece));
-  };
   const auto add = [&](const Section& section) {
-    section.has("touchstone") ? add_touchstone(section.at("touchstone"))
-                              : add_line(section.at("line"));
+    if (section.has("touchstone")) return add_touchstone(section.at("touchstone"));
+    std::optional<Piece> piece = section.has("line")
+                                     ? read_line(section.at("line"), 1.0 / conditions.grid.ui_s)
+                                     : read_lumped(section.at("lumped"));
+    if (piece) pieces.push_back(std::move(*piece));
   };
   if (channel.has("cascade")) {
     for (const Section& piece : channel.at("cascade").items()) add(piece);
@@ -307,9 +446,12 @@ std::optional<int> samples_per_ui_of(const Section& channel) {
 
 std::optional<ReceivedSpectrum> read_channel(const Section& channel,
                                              const PulseConditions& conditions, InputFiles& files) {
-  std::optional<ReceivedSpectrum> spectrum = channel.has("pulse")
-                                                 ? read_pulse(channel.at("pulse"), conditions.grid)
-                                                 : read_network(channel, conditions, files);
+  const bool is_capture =
+      channel.has("pulse_csv") || channel.has("step_csv") || channel.has("waveform_csv");
+  std::optional<ReceivedSpectrum> spectrum =
+      channel.has("pulse") ? read_pulse(channel.at("pulse"), conditions.grid)
+      : is_capture         ? read_capture_of(channel, conditions.grid, files)
+                           : read_network(channel, conditions, files);
   return channel.failed() ? std::nullopt : std::move(spectrum);
 }
 

@@ -13,6 +13,7 @@ namespace tapwright {
 struct PulseConditions {
   TimeGrid grid;
   LaunchShape launch;
+  bool is_victim = true;  ///< not an aggressor: polarity and missing port maps can be told
   std::optional<double> source_ohm;  ///< none: the reference of the first piece
   double source_f = 0.0;
   std::optional<double> load_ohm;  ///< none: the reference of the last piece

@@ -311,6 +311,7 @@ void read_channels(const Section& root, Link& link, InputFiles& files) {
     PulseConditions own = conditions;
     const double ui_ratio = i == 0 ? 1.0 : link.crosstalk[i - 1].ui_ratio;
     const double samples_per_own_ui = link.samples_per_ui * ui_ratio;
+    own.is_victim = i == 0;
     own.grid.ui_s *= ui_ratio;
     own.grid.samples_per_ui = static_cast<int>(std::lround(samples_per_own_ui));
     if (std::abs(samples_per_own_ui - own.grid.samples_per_ui) > 1e-6 * samples_per_own_ui) {

@@ -13,9 +13,8 @@ RegisterWrites register_writes(const Link& link, const Settings& settings) {
     const auto note = [&](const std::string& what) {
       out.notes.push_back(warning_at("", 0, "register field " + field.field + ": " + what));
     };
-    const auto reading = std::find_if(all.begin(), all.end(), [&](const KnobReading& r) {
-      return r.knob.name == field.knob;
-    });
+    const auto reading = std::find_if(
+        all.begin(), all.end(), [&](const KnobReading& r) { return r.knob.name == field.knob; });
     if (reading == all.end() || !reading->code) {
       note("knob " + field.knob + (reading == all.end() ? " does not exist" : " has no codes"));
       continue;

@@ -18,8 +18,8 @@ class SettingsReader {
   SettingsReader(const Link& link, const std::string& file) : link_(link), file_(file) {}
 
   Result<GivenSettings> read(const json& object) {
-    static const std::vector<std::string> kKeys = {"swing_mvppd", "tx_fir", "ctle",
-                                                   "dfe_mv", "phase_ui"};
+    static const std::vector<std::string> kKeys = {"swing_mvppd", "tx_fir", "ctle", "dfe_mv",
+                                                   "phase_ui"};
     for (const auto& [key, value] : object.items()) {
       if (std::find(kKeys.begin(), kKeys.end(), key) != kKeys.end()) continue;
       const auto near = nearest_word(key, kKeys);
@@ -89,9 +89,9 @@ class SettingsReader {
       if (tap.contains("value") && !tap["value"].is_null()) {
         if (const auto value = number(tap["value"], path + ".value")) fir[at] = *value;
       } else if (tap.contains("code") && tap["code"].is_number_integer()) {
-        const auto code = std::find_if(known->codes.begin(), known->codes.end(), [&](const Code& c) {
-          return c.code == tap["code"].get<long long>();
-        });
+        const auto code =
+            std::find_if(known->codes.begin(), known->codes.end(),
+                         [&](const Code& c) { return c.code == tap["code"].get<long long>(); });
         if (code == known->codes.end()) {
           problem(path + ".code: the tap has no code " + tap["code"].dump());
         } else {
@@ -109,8 +109,10 @@ class SettingsReader {
     if (notes_.empty() && !keeps_limits(limits, fir)) {
       std::string shown;
       for (const double c : fir) shown += (shown.empty() ? "" : ", ") + significant(c, 6);
-      problem("tx_fir: (" + shown + ") is outside the transmitter's limits: each tap on a code of "
-              "its list, sum of |taps| at most " + significant(limits.peak_limit, 6));
+      problem("tx_fir: (" + shown +
+              ") is outside the transmitter's limits: each tap on a code of "
+              "its list, sum of |taps| at most " +
+              significant(limits.peak_limit, 6));
     }
   }
 
@@ -157,8 +159,10 @@ class SettingsReader {
       if (std::abs(settled_v(dfe[i], value_v, 1.0) - value_v) > 1e-9) {
         problem(path + ": found " + exact(*mv) + ", which the tap can't take (limit " +
                 significant(v_to_mv(limit_v(dfe[i], 1.0)), 6) + " mV" +
-                (dfe[i].codes.empty() ? ")" : ", nearest code " +
-                 significant(v_to_mv(settled_v(dfe[i], value_v, 1.0)), 6) + " mV)"));
+                (dfe[i].codes.empty()
+                     ? ")"
+                     : ", nearest code " +
+                           significant(v_to_mv(settled_v(dfe[i], value_v, 1.0)), 6) + " mV)"));
       }
     }
   }
@@ -190,9 +194,10 @@ Result<GivenSettings> settings_from_json(const Link& link, std::string_view text
   }
   const bool whole = document.contains("format");
   if (whole && document["format"] != "tapwright.solution/1") {
-    return failure<GivenSettings>(error_at(file_name, 0, "format: found " +
-                                           shown_text(document["format"].dump()) +
-                                           ", wanted \"tapwright.solution/1\""));
+    return failure<GivenSettings>(error_at(file_name, 0,
+                                           "format: found " +
+                                               shown_text(document["format"].dump()) +
+                                               ", wanted \"tapwright.solution/1\""));
   }
   if (whole && !(document.contains("settings") && document["settings"].is_object())) {
     return failure<GivenSettings>(error_at(file_name, 0, "settings: is missing"));

@@ -2,6 +2,7 @@
 
 #include <gtest/gtest.h>
 
+#include <cmath>
 #include <filesystem>
 #include <fstream>
 #include <numbers>
@@ -10,7 +11,9 @@
 #include "support/measured_data.hpp"
 #include "tapwright/base/digest.hpp"
 #include "tapwright/base/fft.hpp"
+#include "tapwright/base/text.hpp"
 #include "tapwright/channel/line_model.hpp"
+#include "tapwright/channel/pattern.hpp"
 #include "tapwright/channel/touchstone.hpp"
 #include "tapwright/link/read_link.hpp"
 
@@ -162,6 +165,127 @@ TEST(ChannelReader, EveryFormOfALineReads) {
   }
 }
 
+TEST(ChannelReader, LumpedElementsDoWhatTheirFormulasSay) {
+  const auto p = [](const std::string& channel) { return record(with_channel(channel)); };
+  const Eigen::VectorXd through = p("{\"line\": " + cable(0.0) + "}");
+  // A shunt of 50 ohm between 100 ohm and 100 ohm: 33.3 ohm in place of 100 ohm at the load, so
+  // 2 * 33.3 / 133.3 = 1/2. A series of 200 ohm: 2 * 100 / 400 = 1/2. Rounding only.
+  const Eigen::VectorXd shunt = p(R"({"lumped": [{"shunt": {"resistance_ohm": 50}}]})");
+  const Eigen::VectorXd series = p(R"({"lumped": [{"series": {"resistance_ohm": 200}}]})");
+  EXPECT_LT(difference(shunt, 0.5 * through), 1e-12);
+  EXPECT_LT(difference(series, 0.5 * through), 1e-12);
+  // A matched section without loss only delays: by 160 ps, which is one UI or 32 samples.
+  const Eigen::VectorXd section =
+      p(R"({"lumped": [{"section": {"impedance_ohm": 100, "delay_ps": 160}}]})");
+  EXPECT_LT(difference(section.tail(section.size() - 32), through.head(through.size() - 32)), 1e-9);
+}
+
+TEST(ChannelReader, AFixtureHalfIsTakenOut) {
+  const Folder folder;
+  const Eigen::VectorXd f = Eigen::VectorXd::LinSpaced(2501, 0.0, 25e9);
+  const DatasheetLine sheet{{{1e9, 0.9}, {3.125e9, 1.75}}, 4.6e-9, 95.0};
+  const auto line = [&](double length_m) { return line_network(sheet, length_m, f, 100.0); };
+  folder.write("whole.s2p", write_touchstone(line(1.0)));
+  folder.write("half.s2p", write_touchstone(line(0.3)));
+  folder.write("rest.s2p", write_touchstone(line(0.4)));
+  const Eigen::VectorXd rest =
+      record(with_channel(R"({"touchstone": {"file": "rest.s2p"}})", folder.path()));
+  const Eigen::VectorXd taken_out = record(with_channel(
+      R"({"touchstone": {"file": "whole.s2p", "fixture_in": {"file": "half.s2p"},
+          "fixture_out": {"file": "half.s2p"}}})",
+      folder.path()));
+  // Rounding, made larger by the inversion of two halves of 2 dB and less.
+  EXPECT_LT(difference(rest, taken_out), 1e-9);
+}
+
+TEST(ChannelReader, PortsOfAFourPortFileAreFoundAndTold) {
+  const Folder folder;
+  const Network line = line_network(DatasheetLine{{{1e9, 2.0}, {5e9, 6.0}}, 6e-9, 50.0}, 0.3,
+                                    Eigen::VectorXd::LinSpaced(2501, 0.0, 25e9), 50.0);
+  // Two such lines side by side, ports 1 and 2 near, 3 and 4 far, with weak coupling.
+  Network pair = empty_network(line.frequencies_hz, Eigen::VectorXcd::Constant(4, 50.0));
+  for (Eigen::Index k = 0; k < line.num_points(); ++k) {
+    for (const auto& [near, far] : {std::pair(0, 2), std::pair(1, 3)}) {
+      pair.at(k)(far, near) = line.at(k)(1, 0);
+      pair.at(k)(near, far) = line.at(k)(0, 1);
+    }
+    pair.at(k)(1, 0) = pair.at(k)(0, 1) = pair.at(k)(3, 2) = pair.at(k)(2, 3) = 0.01;
+  }
+  folder.write("pair.s4p", write_touchstone(pair));
+  const Result<Link> found = with_channel(R"({"touchstone": {"file": "pair.s4p"}})", folder.path());
+  const Result<Link> given = with_channel(
+      R"({"touchstone": {"file": "pair.s4p", "ports": {"in": [1, 2], "out": [3, 4]}}})",
+      folder.path());
+  ASSERT_TRUE(found);
+  EXPECT_EQ(found.notes.size(), 1U);  // what was taken
+  EXPECT_EQ(real_record(found.value->channel.values, found.value->channel.num_samples),
+            record(given));
+}
+
+/// A pulse of 8 UI at 6.25 GBd, 0 at both ends, at time t_s.
+double smooth(double t_s) {
+  const double x = t_s / (8 * 160e-12);
+  return x <= 0.0 || x >= 1.0 ? 0.0 : 0.8 * std::pow(std::sin(std::numbers::pi * x), 6);
+}
+
+TEST(ChannelReader, CapturesOfOneChannelAgree) {
+  const Folder folder;
+  std::string pulse = "time [ps];value [mV]\n";
+  std::string step = "t,v\n";
+  for (int i = 0; i < 20 * 16; ++i) {
+    const double t_s = i * 10e-12;
+    pulse += std::to_string(i * 10) + ";" + std::to_string(300 * smooth(t_s)) + "\n";
+    // The step that differs by this pulse from itself one UI later: the sum of pulses so far.
+    double sum = 0.0;
+    for (int k = 0; k <= 20; ++k) sum += 0.5 * smooth(t_s - k * 160e-12);
+    step += std::to_string(i * 1e-2) + "," + std::to_string(sum) + "\n";
+  }
+  folder.write("pulse.csv", pulse);
+  folder.write("step.csv", step);
+  const auto p = [&](const std::string& channel) {
+    const Result<Link> link = with_channel(channel, folder.path());
+    for (const Diagnostic& note : link.notes) {
+      EXPECT_EQ(note.severity, Diagnostic::Severity::kWarning) << to_string(note);
+    }
+    return link ? real_record(link.value->channel.values, link.value->channel.num_samples)
+                : Eigen::VectorXd(Eigen::VectorXd::Zero(1));
+  };
+  const Eigen::VectorXd from_pulse =
+      p(R"({"pulse_csv": {"file": "pulse.csv", "at_swing_mvppd": 600}})");
+  const Eigen::VectorXd from_step =
+      p(R"({"step_csv": {"file": "step.csv", "step_mv": 500, "format": {"time_unit": "ns"}}})");
+  for (const Eigen::VectorXd& samples : {from_pulse, from_step}) {
+    // The curve's own height; it was written in steps of a microvolt and then interpolated.
+    EXPECT_NEAR(samples.maxCoeff(), 0.8, 1e-4);
+    EXPECT_NEAR(samples.sum() / 32, 0.8 * 8 * 5.0 / 16, 1e-3);  // mean of sin^6: 5/16
+  }
+}
+
+TEST(ChannelReader, AWaveformOfAKnownPatternGivesItsPulse) {
+  const Folder folder;
+  const Pattern pattern = *pattern_named("prbs9", "").value;
+  const Eigen::VectorXd levels = symbols(pattern, 100, 600);
+  std::string csv = "s,V\n";
+  for (int i = 0; i < 590 * 8; ++i) {
+    const double t_s = i * 20e-12;
+    double v = 0.0;
+    for (int k = std::max(0, i / 8 - 9); k <= i / 8; ++k)
+      v += levels[k] * smooth(t_s - k * 160e-12);
+    if (i >= 80) csv += exact(t_s) + "," + exact(0.3 * v) + "\n";
+  }
+  folder.write("w.csv", csv);
+  const Result<Link> link = with_channel(
+      R"({"waveform_csv": {"file": "w.csv", "pattern": "prbs9", "at_swing_mvppd": 600,
+          "pre_ui": 6, "post_ui": 12}})",
+      folder.path());
+  ASSERT_TRUE(link) << to_string(link.notes[0]);
+  const Eigen::VectorXd p =
+      real_record(link.value->channel.values, link.value->channel.num_samples);
+  // Method: the capture has 8 samples per UI of a curve without content above a third of a UI.
+  EXPECT_NEAR(p.maxCoeff(), 0.8, 1e-2);
+  EXPECT_NEAR(p.sum() / 32, 0.8 * 8 * 5.0 / 16, 2e-2);
+}
+
 TEST(ChannelReader, ADeviceFileStandsInAndItsNamesCountFromItsOwnFolder) {
   const Folder folder;
   folder.write("parts/device.json", R"({"format": "tapwright.device/1",
@@ -199,6 +323,27 @@ TEST(ChannelReader, AFaultInADeviceFileNamesThatFile) {
   EXPECT_EQ(
       to_string(link.notes[0]),
       folder.path() + "/device.json:2: error: transmitter.fir[0].min: min 1 lies above max 0.5");
+}
+
+TEST(Samples, AllReadWithoutANote) {
+  int num_links = 0;
+  for (const auto& entry : std::filesystem::directory_iterator(TAPWRIGHT_SOURCE_DIR "/channels")) {
+    const std::string name = entry.path().filename().string();
+    if (!name.starts_with("camera_") || entry.path().extension() != ".json") continue;
+    const Result<Link> link = read_link(entry.path().string());
+    for (const Diagnostic& note : link.notes) ADD_FAILURE() << to_string(note);
+    ASSERT_TRUE(link);
+    EXPECT_EQ(link.value->registers.size(), 8U);
+    ++num_links;
+  }
+  EXPECT_EQ(num_links, 4);
+}
+
+TEST(Samples, TheExampleReadsWithoutANoteAndNamesNoFile) {
+  const Result<Link> link = parse_link(example_link(), "example.json", "/nonexistent");
+  for (const Diagnostic& note : link.notes) ADD_FAILURE() << to_string(note);
+  ASSERT_TRUE(link);
+  EXPECT_EQ(link.value->inputs.size(), 1U);
 }
 
 TEST(ChannelReader, MeasuredBoardsReadAndCascade) {
