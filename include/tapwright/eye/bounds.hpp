@@ -15,6 +15,7 @@ namespace tapwright {
 ///     folded spectrum       S(f) = (2 sigma_X^2 / (eta0 T)) sum_n |P(f + n/T)|^2
 ///     linear, unbiased      1 / mean(1/(1+S)) - 1
 ///     feedback, unbiased    exp(mean ln(1+S)) - 1
+///     zero forcing          1 / mean(1/S) and exp(mean ln S), 0 where S has a null
 ///
 /// Source: J. Salz, Bell Syst. Tech. J. 52(8), 1973; J. M. Cioffi, G. P. Dudevoir, M. V. Eyuboglu,
 ///         G. D. Forney, IEEE Trans. Commun. 43(10), 1995.
@@ -22,12 +23,17 @@ struct EqualizerBounds {
   double matched_filter = 0.0;
   double linear = 0.0;    ///< infinite MMSE linear equalizer
   double feedback = 0.0;  ///< infinite MMSE decision-feedback equalizer
+  double zero_forcing_linear = 0.0;
+  double zero_forcing_feedback = 0.0;
 };
 
-/// From a folded spectrum sampled evenly over one period.
+/// From a folded spectrum S, sampled evenly over one period of 1/T. Errors: std::invalid_argument
+/// if it is empty or holds a negative or non-finite value.
 [[nodiscard]] EqualizerBounds bounds_of_folded_spectrum(const Eigen::VectorXd& folded);
 
-/// Of the model's input pulse at a swing; empty without a noise density (math.md section 3).
+/// Of the model's pulse before the receiver's noise filter and CTLE, FIR flat, at a swing. Empty
+/// without a noise density or when the pulse was taken at the slicer: then there is no white noise
+/// to set it against. Crosstalk and jitter are left out; they can only take away.
 [[nodiscard]] std::optional<EqualizerBounds> equalizer_bounds(const EyeModel& model,
                                                               std::size_t swing_index);
 
@@ -50,12 +56,16 @@ struct FiniteEqualizer {
                                           int num_feedback, int delay, double symbol_variance,
                                           double noise_v2);
 
-/// Symbols' worth of settings: signal-to-noise-and-distortion ratio of a setting,
-/// q_0^2 sigma_X^2 / (sigma^2 + sigma_X^2 sum r_k^2), to set beside the bounds.
+/// What a setting makes of it: q_0^2 sigma_X^2 over the mean square of everything else at the
+/// slicer (noise, residual cursors, crosstalk, jitter), a plain ratio to set beside the bounds.
 [[nodiscard]] double signal_to_distortion(const EyeModel& model, const Settings& settings);
 
-/// Error-free bits that prove an error ratio with a confidence: -ln(1 - confidence) / error_ratio
-/// (Poisson). With errors seen, the number for which at most `errors` are that unlikely.
+/// Bits that prove an error ratio: were it any larger, a run of that many bits would show at most
+/// `errors` errors with a probability below 1 - confidence. Without errors
+/// -ln(1 - confidence) / error_ratio.
+///
+/// Errors: std::invalid_argument unless 0 < error_ratio < 1, 0 < confidence < 1 and errors >= 0.
+/// Source: Poisson distribution.
 [[nodiscard]] double bits_to_prove(double error_ratio, double confidence, int errors = 0);
 
 }  // namespace tapwright
