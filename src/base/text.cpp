@@ -16,23 +16,6 @@ std::string_view without_plus(std::string_view text) {
   return text;
 }
 
-/// Length in bytes of the well-formed UTF-8 character at the front of `text`; 0 when malformed.
-std::size_t utf8_length(std::string_view text) {
-  const auto byte = [&](std::size_t i) { return static_cast<unsigned char>(text[i]); };
-  const unsigned char lead = byte(0);
-  const std::size_t length = lead < 0x80   ? 1
-                             : lead < 0xC2 ? 0
-                             : lead < 0xE0 ? 2
-                             : lead < 0xF0 ? 3
-                             : lead < 0xF5 ? 4
-                                           : 0;
-  if (length == 0 || length > text.size()) return 0;
-  for (std::size_t i = 1; i < length; ++i) {
-    if ((byte(i) & 0xC0) != 0x80) return 0;
-  }
-  return length;
-}
-
 }  // namespace
 
 std::optional<double> parse_number(std::string_view text) {
@@ -81,9 +64,30 @@ std::string significant(double value, int digits) {
   return code == std::errc{} ? std::string(buffer.data(), end) : exact(value);
 }
 
-std::string shown_text(std::string_view text, std::size_t max_bytes) {
+std::size_t utf8_length(std::string_view text) {
+  const auto byte = [&](std::size_t i) { return static_cast<unsigned char>(text[i]); };
+  const unsigned char lead = byte(0);
+  const std::size_t length = lead < 0x80   ? 1
+                             : lead < 0xC2 ? 0
+                             : lead < 0xE0 ? 2
+                             : lead < 0xF0 ? 3
+                             : lead < 0xF5 ? 4
+                                           : 0;
+  if (length == 0 || length > text.size()) return 0;
+  for (std::size_t i = 1; i < length; ++i) {
+    if ((byte(i) & 0xC0) != 0x80) return 0;
+  }
+  // Longer than needed, a surrogate, or past U+10FFFF.
+  if ((lead == 0xE0 && byte(1) < 0xA0) || (lead == 0xED && byte(1) > 0x9F) ||
+      (lead == 0xF0 && byte(1) < 0x90) || (lead == 0xF4 && byte(1) > 0x8F)) {
+    return 0;
+  }
+  return length;
+}
+
+std::string printable_text(std::string_view text, std::size_t max_bytes) {
   static constexpr std::string_view kHex = "0123456789abcdef";
-  std::string out = "\"";
+  std::string out;
   while (!text.empty()) {
     if (out.size() > max_bytes) {
       out += "...";
@@ -101,7 +105,11 @@ std::string shown_text(std::string_view text, std::size_t max_bytes) {
       text.remove_prefix(length);
     }
   }
-  return out + "\"";
+  return out;
+}
+
+std::string shown_text(std::string_view text, std::size_t max_bytes) {
+  return '"' + printable_text(text, max_bytes) + '"';
 }
 
 std::optional<std::string> nearest_word(std::string_view word,

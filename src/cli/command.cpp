@@ -27,7 +27,7 @@ std::optional<double> Arguments::number(const std::string& name, double min, dou
   if (!given) return std::nullopt;
   const auto value = parse_number(*given);
   if (!value || *value < min || *value > max) {
-    throw BadArgument{name + ": found \"" + shown_text(*given) + "\", wanted a number from " +
+    throw BadArgument{name + ": found " + shown_text(*given) + ", wanted a number from " +
                       exact(min) + " to " + exact(max)};
   }
   return value;
@@ -39,7 +39,7 @@ std::optional<long long> Arguments::integer(const std::string& name, long long m
   if (!given) return std::nullopt;
   const auto value = parse_integer(*given);
   if (!value || *value < min || *value > max) {
-    throw BadArgument{name + ": found \"" + shown_text(*given) + "\", wanted a whole number from " +
+    throw BadArgument{name + ": found " + shown_text(*given) + ", wanted a whole number from " +
                       std::to_string(min) + " to " + std::to_string(max)};
   }
   return value;

@@ -16,7 +16,7 @@ std::optional<EyeModel> model_from(const Arguments& arguments, Console& console)
   for (const std::string& word : arguments.texts("--set")) {
     const std::size_t equals = word.find('=');
     if (equals == std::string::npos || equals == 0) {
-      throw BadArgument{"--set: found \"" + shown_text(word) + "\", wanted KEY=VALUE"};
+      throw BadArgument{"--set: found " + shown_text(word) + ", wanted KEY=VALUE"};
     }
     changes.push_back({word.substr(0, equals), word.substr(equals + 1)});
   }
@@ -102,7 +102,7 @@ std::vector<std::string> split(const std::string& list) {
 
 double number_in(const std::string& option, const std::string& word) {
   const auto value = parse_number(trimmed(word));
-  if (!value) throw BadArgument{option + ": found \"" + shown_text(word) + "\", wanted a number"};
+  if (!value) throw BadArgument{option + ": found " + shown_text(word) + ", wanted a number"};
   return *value;
 }
 
@@ -118,7 +118,7 @@ std::optional<Settings> settings_from(const Arguments& arguments, Console& conso
       const std::size_t colon = part.find(':');
       const auto position = parse_integer(trimmed(part.substr(0, colon)));
       if (colon == std::string::npos || !position) {
-        throw BadArgument{"--fir: found \"" + shown_text(part) + "\", wanted POSITION:VALUE"};
+        throw BadArgument{"--fir: found " + shown_text(part) + ", wanted POSITION:VALUE"};
       }
       object["tx_fir"].push_back(
           {{"position", *position}, {"value", number_in("--fir", part.substr(colon + 1))}});

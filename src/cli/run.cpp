@@ -44,7 +44,7 @@ std::optional<Arguments> parse(const Command& command, std::vector<std::string> 
       for (const OptionRow& row : command.rows) names.push_back(row.name);
       const std::string name = word.substr(0, word.find('='));
       if (std::find(names.begin(), names.end(), name) != names.end()) continue;
-      message = "no option " + shown_text(name);
+      message = "no option " + printable_text(name, 60);
       if (const auto near = nearest_word(name, names)) message += "; did you mean " + *near + "?";
     }
     console.error(message);
@@ -100,7 +100,7 @@ ExitCode dispatch(const std::vector<std::string>& args, Console& console) {
     }
     names.push_back(command.name);
   }
-  console.err << "tapwright: error: no command \"" << shown_text(args[0]) << '"';
+  console.err << "tapwright: error: no command " << shown_text(args[0]);
   if (const auto near = nearest_word(args[0], names)) console.err << "; did you mean " << *near << '?';
   console.err << " (tapwright --help lists them)\n";
   return ExitCode::kBadInput;

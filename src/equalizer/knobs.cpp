@@ -163,6 +163,7 @@ std::optional<Settings> moved(const Device& device, const Settings& settings, co
       const FirTap& tap = limits.taps[knob.index];
       if (tap.is_remainder) return std::nullopt;
       if (tap.codes.empty()) {
+        if (tap.max <= tap.min) return std::nullopt;
         out.fir[at] += steps * kShareOfRange * (tap.max - tap.min);
       } else {
         const auto to = stepped(nearest_code(tap.codes, settings.fir[at]), tap.codes.size());

@@ -1,31 +1,13 @@
 #include "report/escape.hpp"
 
+#include "tapwright/base/text.hpp"
+
 namespace tapwright {
-namespace {
-
-/// Length of the well-formed UTF-8 sequence at `at`, or 0.
-std::size_t utf8_length(std::string_view text, std::size_t at) {
-  const auto byte = [&](std::size_t i) { return static_cast<unsigned char>(text[i]); };
-  const unsigned lead = byte(at);
-  const std::size_t size = lead < 0x80 ? 1 : lead >= 0xC2 && lead < 0xE0 ? 2 : lead >= 0xE0 && lead < 0xF0 ? 3
-                           : lead >= 0xF0 && lead < 0xF5 ? 4 : 0;
-  if (size == 0 || at + size > text.size()) return 0;
-  for (std::size_t i = 1; i < size; ++i) {
-    if ((byte(at + i) & 0xC0) != 0x80) return 0;
-  }
-  if (lead == 0xE0 && byte(at + 1) < 0xA0) return 0;
-  if (lead == 0xED && byte(at + 1) > 0x9F) return 0;  // surrogates
-  if (lead == 0xF0 && byte(at + 1) < 0x90) return 0;
-  if (lead == 0xF4 && byte(at + 1) > 0x8F) return 0;
-  return size;
-}
-
-}  // namespace
 
 std::string markup_escaped(std::string_view text) {
   std::string out;
   for (std::size_t i = 0; i < text.size();) {
-    const std::size_t length = utf8_length(text, i);
+    const std::size_t length = utf8_length(text.substr(i));
     const char c = text[i];
     const auto u = static_cast<unsigned char>(c);
     if (length == 0 || (u < 0x20 && c != '\t' && c != '\n') || u == 0x7F) {

@@ -53,7 +53,7 @@ std::string text_of(const PulseReport& report) {
                                       model.states[report.settings.ctle_index].peak_index()
                                 : 0;
   const double peak_v = plain.samples_v().maxCoeff();
-  std::string text = (model.link.name.empty() ? "link" : shown_text(model.link.name, 200)) + "\n\n";
+  std::string text = (model.link.name.empty() ? "link" : printable_text(model.link.name, 200)) + "\n\n";
   text += "Pulse\n";
   text += table_text(
       {{"peak before FIR and DFE", fixed(v_to_mv(peak_v), 2) + " mV"},

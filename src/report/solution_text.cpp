@@ -193,7 +193,7 @@ SolutionReport report_on(const EyeModel& model, Solution solution) {
 std::string text_of(const SolutionReport& report) {
   const EyeModel& model = *report.model;
   const Solution& s = report.solution;
-  const std::string name = model.link.name.empty() ? "link" : shown_text(model.link.name, 200);
+  const std::string name = model.link.name.empty() ? "link" : printable_text(model.link.name, 200);
   std::string text = name + "\n" + heading(model.link) + "\n\n";
   text += codes_section(model, s.settings) + "\n" + eye_section(report) + "\n";
   if (s.proof.num_cells > 0 || s.proof.kind != Proof::Kind::kNone) {
@@ -210,7 +210,7 @@ std::string text_of(const SolutionReport& report) {
                               model.span_reason + "); outside it at most " +
                               fixed(v_to_mv(2.0 * s.score.outside_span_v), 2) + " mV of eye");
   for (const InputFile& input : model.link.inputs) {
-    text += item_text("  ", shown_text(input.path, 200) + "  sha256 " + input.sha256.substr(0, 16));
+    text += item_text("  ", printable_text(input.path, 200) + "  sha256 " + input.sha256.substr(0, 16));
   }
   for (const auto* notes : {&model.link.warnings, &model.warnings, &s.warnings}) {
     for (const Diagnostic& note : *notes) text += item_text("  ", "note: " + note.message);

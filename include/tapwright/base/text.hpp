@@ -21,9 +21,13 @@ namespace tapwright {
 /// At most `digits` significant digits, for people.
 [[nodiscard]] std::string significant(double value, int digits);
 
-/// `text` shortened and made printable for use inside a message: control characters and broken
-/// UTF-8 escaped, at most `max_bytes` bytes.
+/// `text` shortened and made printable: control characters and broken UTF-8 escaped, at most about
+/// `max_bytes` bytes.
+[[nodiscard]] std::string printable_text(std::string_view text, std::size_t max_bytes);
+/// The same in double quotes, for use inside a message.
 [[nodiscard]] std::string shown_text(std::string_view text, std::size_t max_bytes = 60);
+/// Bytes of the well-formed UTF-8 sequence that `text` begins with; 0 when there is none.
+[[nodiscard]] std::size_t utf8_length(std::string_view text);
 
 /// The candidate nearest to `word` by edit distance, when near enough to be a likely slip.
 [[nodiscard]] std::optional<std::string> nearest_word(std::string_view word,
