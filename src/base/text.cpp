@@ -64,6 +64,14 @@ std::string significant(double value, int digits) {
   return code == std::errc{} ? std::string(buffer.data(), end) : exact(value);
 }
 
+std::string hexadecimal(unsigned long long value) {
+  std::array<char, 20> buffer{};
+  const auto [end, code] = std::to_chars(buffer.data(), buffer.data() + buffer.size(), value, 16);
+  std::string text = code == std::errc{} ? std::string(buffer.data(), end) : std::string();
+  for (char& c : text) c = c >= 'a' ? static_cast<char>(c - 'a' + 'A') : c;
+  return "0x" + text;
+}
+
 std::size_t utf8_length(std::string_view text) {
   const auto byte = [&](std::size_t i) { return static_cast<unsigned char>(text[i]); };
   const unsigned char lead = byte(0);

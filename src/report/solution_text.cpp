@@ -19,30 +19,6 @@ std::string change_mv(double v) {
   return text.starts_with('-') || text == "0.0" ? text : "+" + text;
 }
 
-std::string hex(unsigned long long value) {
-  constexpr char kDigits[] = "0123456789ABCDEF";
-  std::string text;
-  do {
-    text.insert(text.begin(), kDigits[value & 0xF]);
-    value >>= 4;
-  } while (value != 0);
-  return "0x" + text;
-}
-
-std::string heading(const Link& link) {
-  const Signal& signal = link.signal;
-  std::string text = significant(signal.symbol_rate_bd * 1e-9, 6) + " GBd, PAM-" +
-                     std::to_string(signal.levels);
-  switch (signal.line_code.kind) {
-    case LineCodeKind::kNone: break;
-    case LineCodeKind::k8b10b: text += ", 8b10b"; break;
-    case LineCodeKind::k64b66b: text += ", 64b66b"; break;
-    case LineCodeKind::kManchester: text += ", Manchester"; break;
-    case LineCodeKind::kStateMachine: text += ", line code as given"; break;
-  }
-  return text;
-}
-
 std::string codes_section(const EyeModel& model, const Settings& settings) {
   Rows rows{{"knob", "value", "code", ""}};
   for (const KnobReading& r : readings(model.link.device, settings)) {
@@ -61,7 +37,7 @@ std::string codes_section(const EyeModel& model, const Settings& settings) {
       const std::string bits = w.high_bit == w.low_bit ? std::to_string(w.high_bit)
                                                        : std::to_string(w.high_bit) + ":" +
                                                              std::to_string(w.low_bit);
-      writes.push_back({w.field, hex(w.address), bits, hex(w.value)});
+      writes.push_back({w.field, hexadecimal(w.address), bits, hexadecimal(w.value)});
     }
     text += "\nRegister writes\n" + table_text(writes);
     for (const Diagnostic& note : registers.notes) text += item_text("  ", note.message);
@@ -115,31 +91,6 @@ std::string eye_section(const SolutionReport& report) {
   return text;
 }
 
-std::string proof_section(const Proof& proof) {
-  std::string text = "How sure\n";
-  switch (proof.kind) {
-    case Proof::Kind::kProven:
-      text += item_text("  ", "Proven: no setting within the limits opens the eye further than " +
-                                  mv(proof.bound_v) + " mV (gap " + fixed(v_to_mv(proof.gap_v), 3) +
-                                  " mV). " + proof.reason);
-      break;
-    case Proof::Kind::kBounded:
-      text += item_text("  ", "Bounded: no setting within the limits opens the eye further than " +
-                                  mv(proof.bound_v) + " mV; at most " + mv(proof.gap_v) +
-                                  " mV are left. " + proof.reason);
-      break;
-    case Proof::Kind::kExhausted:
-      text += item_text("  ", "Exhausted: every code was scored. " + proof.reason);
-      break;
-    case Proof::Kind::kNone: text += item_text("  ", "No claim. " + proof.reason); break;
-  }
-  text += item_text("  ", std::to_string(proof.num_cells) +
-                              " combinations of swing, CTLE state and sampling instant, " +
-                              std::to_string(proof.num_nodes) + " boxes of FIR codes, " +
-                              std::to_string(proof.num_settings) + " settings scored.");
-  return text;
-}
-
 std::string compared_section(const SolutionReport& report) {
   Rows rows{{"method", "eye, mV", "of the best"}};
   const bool worst = report.model->link.objective == ObjectiveKind::kWorstCase;
@@ -177,6 +128,60 @@ std::string sensitivity_section(const std::vector<KnobSensitivity>& all) {
 
 }  // namespace
 
+std::string signal_line(const Link& link) {
+  const Signal& signal = link.signal;
+  std::string text = significant(signal.symbol_rate_bd * 1e-9, 6) + " GBd, PAM-" +
+                     std::to_string(signal.levels);
+  switch (signal.line_code.kind) {
+    case LineCodeKind::kNone: break;
+    case LineCodeKind::k8b10b: text += ", 8b10b"; break;
+    case LineCodeKind::k64b66b: text += ", 64b66b"; break;
+    case LineCodeKind::kManchester: text += ", Manchester"; break;
+    case LineCodeKind::kStateMachine: text += ", line code as given"; break;
+  }
+  return text;
+}
+
+
+std::vector<std::string> proof_lines(const Proof& proof) {
+  std::vector<std::string> lines;
+  switch (proof.kind) {
+    case Proof::Kind::kProven:
+      lines.push_back("Proven: no setting within the limits opens the eye further than " + mv(proof.bound_v) + " mV (gap " +
+                      fixed(v_to_mv(proof.gap_v), 3) + " mV). " + proof.reason);
+      break;
+    case Proof::Kind::kBounded:
+      lines.push_back("Bounded: no setting within the limits opens the eye further than " + mv(proof.bound_v) +
+                      " mV; at most " + mv(proof.gap_v) + " mV are left. " + proof.reason);
+      break;
+    case Proof::Kind::kExhausted: lines.push_back("Exhausted: every code was scored. " + proof.reason); break;
+    case Proof::Kind::kNone:
+      if (!proof.reason.empty()) lines.push_back("No claim. " + proof.reason);
+      break;
+  }
+  if (proof.num_cells > 0) {
+    lines.push_back(std::to_string(proof.num_cells) + " combinations of swing, CTLE state and sampling instant, " +
+                    std::to_string(proof.num_nodes) + " boxes of FIR codes, " + std::to_string(proof.num_settings) +
+                    " settings scored.");
+  }
+  return lines;
+}
+
+std::vector<std::string> assumption_lines(const SolutionReport& report) {
+  const EyeModel& model = *report.model;
+  std::vector<std::string> lines;
+  lines.push_back("span: " + std::to_string(model.span_ui[0]) + " UI before and " + std::to_string(model.span_ui[1]) +
+                  " UI after the sampling instant (" + model.span_reason + "); outside it at most " +
+                  fixed(v_to_mv(2.0 * report.solution.score.outside_span_v), 2) + " mV of eye");
+  for (const InputFile& input : model.link.inputs) {
+    lines.push_back(printable_text(input.path, 200) + ", sha256 " + input.sha256.substr(0, 16));
+  }
+  for (const auto* notes : {&model.link.warnings, &model.warnings, &report.solution.warnings}) {
+    for (const Diagnostic& note : *notes) lines.push_back("note: " + note.message);
+  }
+  return lines;
+}
+
 std::string caution() {
   return "A prediction is no measurement: confirm with an error-ratio test. Keep launch and input "
          "amplitudes inside the devices' absolute limits; local codes, emission limits and licensed "
@@ -194,10 +199,12 @@ std::string text_of(const SolutionReport& report) {
   const EyeModel& model = *report.model;
   const Solution& s = report.solution;
   const std::string name = model.link.name.empty() ? "link" : printable_text(model.link.name, 200);
-  std::string text = name + "\n" + heading(model.link) + "\n\n";
+  std::string text = name + "\n" + signal_line(model.link) + "\n\n";
   text += codes_section(model, s.settings) + "\n" + eye_section(report) + "\n";
-  if (s.proof.num_cells > 0 || s.proof.kind != Proof::Kind::kNone) {
-    text += proof_section(s.proof) + "\n";
+  if (const auto lines = proof_lines(s.proof); !lines.empty()) {
+    text += "How sure\n";
+    for (const std::string& line : lines) text += item_text("  ", line);
+    text += "\n";
   }
   if (!s.compared.empty()) text += compared_section(report) + "\n";
   const std::string steps = sensitivity_section(report.sensitivity);
@@ -205,16 +212,7 @@ std::string text_of(const SolutionReport& report) {
   text += "What holds it back\n";
   for (const std::string& line : report.limited_by) text += item_text("  ", line);
   text += "\nTaken as given\n";
-  text += item_text("  ", "span: " + std::to_string(model.span_ui[0]) + " UI before and " +
-                              std::to_string(model.span_ui[1]) + " UI after the sampling instant (" +
-                              model.span_reason + "); outside it at most " +
-                              fixed(v_to_mv(2.0 * s.score.outside_span_v), 2) + " mV of eye");
-  for (const InputFile& input : model.link.inputs) {
-    text += item_text("  ", printable_text(input.path, 200) + "  sha256 " + input.sha256.substr(0, 16));
-  }
-  for (const auto* notes : {&model.link.warnings, &model.warnings, &s.warnings}) {
-    for (const Diagnostic& note : *notes) text += item_text("  ", "note: " + note.message);
-  }
+  for (const std::string& line : assumption_lines(report)) text += item_text("  ", line);
   return text + "\n" + item_text("", caution());
 }
 

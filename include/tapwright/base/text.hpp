@@ -21,6 +21,9 @@ namespace tapwright {
 /// At most `digits` significant digits, for people.
 [[nodiscard]] std::string significant(double value, int digits);
 
+/// 0x and upper-case digits, as register maps are written.
+[[nodiscard]] std::string hexadecimal(unsigned long long value);
+
 /// `text` shortened and made printable: control characters and broken UTF-8 escaped, at most about
 /// `max_bytes` bytes.
 [[nodiscard]] std::string printable_text(std::string_view text, std::size_t max_bytes);

@@ -87,7 +87,4 @@ struct Figure {
 /// A whole SVG document: 760 by 420, own fonts by name only, no script.
 [[nodiscard]] std::string svg_of(const Figure& figure);
 
-/// The figure as a JSON object for the page.
-[[nodiscard]] std::string json_of(const Figure& figure);
-
 }  // namespace tapwright

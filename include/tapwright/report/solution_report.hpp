@@ -26,6 +26,13 @@ struct SolutionReport {
 /// "format": "tapwright.solution/1", at full precision, two-space indent.
 [[nodiscard]] std::string json_of(const SolutionReport& report);
 
+/// Rate, levels and line code in a line.
+[[nodiscard]] std::string signal_line(const Link& link);
+/// What was proven, in sentences; empty for a setting that was only scored.
+[[nodiscard]] std::vector<std::string> proof_lines(const Proof& proof);
+/// Span, inputs with the start of their hashes, and every warning.
+[[nodiscard]] std::vector<std::string> assumption_lines(const SolutionReport& report);
+
 /// The caution that every report carries.
 [[nodiscard]] std::string caution();
 
