@@ -1,13 +1,15 @@
 #include <ostream>
 
 #include "cli/link_input.hpp"
+#include "tapwright/report/html_report.hpp"
+#include "tapwright/report/output_file.hpp"
 #include "tapwright/report/solution_report.hpp"
 #include "tapwright/search/solve.hpp"
 
 namespace tapwright::cli {
 namespace {
 
-const std::vector<std::string> kOutputs = {"--json"};
+const std::vector<std::string> kOutputs = {"--json", "--html"};
 
 ExitCode run_solve(const Arguments& arguments, Console& console) {
   const RunControl control = run_control(arguments, console);
@@ -15,6 +17,12 @@ ExitCode run_solve(const Arguments& arguments, Console& console) {
   options.max_nodes = arguments.integer("--max-nodes", 1, 1'000'000'000'000).value_or(options.max_nodes);
   options.max_seconds = arguments.number("--max-seconds", 0.001, 1e7);
   if (!outputs_can_be_written(arguments, console, kOutputs)) return ExitCode::kBadInput;
+  if (const auto folder = arguments.text("--figures")) {
+    if (const auto problem = check_output(*folder + "/eye.svg")) {
+      console.tell({*problem});
+      return ExitCode::kBadInput;
+    }
+  }
   const auto model = model_from(arguments, console);
   if (!model) return ExitCode::kBadInput;
 
@@ -24,7 +32,20 @@ ExitCode run_solve(const Arguments& arguments, Console& console) {
     console.error("stopped; nothing was written");
     return ExitCode::kStopped;
   }
-  if (!write_to(arguments, console, "--json", json_of(report))) return ExitCode::kBadInput;
+  if (arguments.has("--json") && !write_to(arguments, console, "--json", json_of(report))) {
+    return ExitCode::kBadInput;
+  }
+  if (arguments.has("--html") && !write_to(arguments, console, "--html", html_of(report))) {
+    return ExitCode::kBadInput;
+  }
+  if (const auto folder = arguments.text("--figures")) {
+    for (const Figure& figure : figures_of(report)) {
+      if (const auto problem = write_output(*folder + "/" + figure.id + ".svg", svg_of(figure))) {
+        console.tell({*problem});
+        return ExitCode::kBadInput;
+      }
+    }
+  }
   if (!takes_standard_output(arguments, kOutputs)) console.out << text_of(report);
   return report.solution.score.target_met() ? ExitCode::kOk : ExitCode::kTargetMissed;
 }
@@ -42,6 +63,8 @@ Command solve_command() {
                 {"LINK", "", "the built-in sample", "link file"},
                 set_row(),
                 {"--json", "FILE", "", "write the answer as JSON (tapwright.solution/1); - is standard output"},
+                {"--html", "FILE", "", "write a report to look at, one file that opens offline"},
+                {"--figures", "DIR", "", "write the report's figures as SVG files into a directory"},
                 {"--max-nodes", "N", "50000000", "boxes of FIR codes to look at before settling for a bound"},
                 {"--max-seconds", "S", "none", "likewise in seconds; the answer may then differ between runs"},
                 threads_row()};
