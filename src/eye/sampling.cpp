@@ -74,16 +74,26 @@ std::optional<Eigen::Index> mueller_muller_phase(const EyeModel& model, const Se
                          : 0.0;
     return h.pulse.at(i - per_ui) - (post - taken);
   };
-  // Early the post-cursor outweighs the pre-cursor (negative), late the other way round.
+  // Early the post-cursor outweighs the pre-cursor (negative), late the other way round: the loop
+  // rests where the balance rises through 0. Rounding of the transforms counts as 0.
   const Eigen::Index peak = h.pulse.peak_index();
-  double after = balance(peak);
-  for (Eigen::Index i = peak; i > peak - 2 * per_ui; --i) {
-    const double before = balance(i - 1);
-    if (after >= 0.0 && (before < 0.0 || after == 0.0)) {
-      const bool earlier = std::abs(before) < std::abs(after);
-      return (earlier ? i - 1 : i) - h.origin;
+  const double rounding_v = 1e-9 * h.pulse.at(peak);
+  const auto sign_at = [&](Eigen::Index i) {
+    const double value = balance(i);
+    return value > rounding_v ? 1 : value < -rounding_v ? -1 : 0;
+  };
+  const auto nearer = [&](Eigen::Index i, Eigen::Index j) {
+    return std::abs(balance(i)) <= std::abs(balance(j)) ? i : j;
+  };
+  if (sign_at(peak) >= 0) {
+    for (Eigen::Index i = peak; i > peak - 2 * per_ui; --i) {
+      if (sign_at(i) == 0) return i - h.origin;
+      if (sign_at(i - 1) < 0) return nearer(i, i - 1) - h.origin;
     }
-    after = before;
+    return std::nullopt;
+  }
+  for (Eigen::Index i = peak + 1; i < peak + 2 * per_ui; ++i) {
+    if (sign_at(i) >= 0) return nearer(i, i - 1) - h.origin;
   }
   return std::nullopt;
 }

@@ -32,8 +32,8 @@ struct SamplingInstant {
 ///
 ///     best            the candidate phase of the largest eye height, DFE settled at each
 ///     mueller_muller  h(t_s - T) = h(t_s + T) - h(t_s) b_1, h the pulse after FIR and CTLE, b_1
-///                     the clipped first DFE tap over h(t_s); of several roots the nearest before
-///                     the peak (IEEE 802.3 Annex 93A)
+///                     the clipped first DFE tap over h(t_s) (IEEE 802.3 Annex 93A); of several
+///                     roots the nearest before the peak, after it when the peak is too early
 ///     edge            half a UI after the median zero crossing of a seeded coded stream
 [[nodiscard]] SamplingInstant sampling_instant(const EyeModel& model, const Settings& settings,
                                                SamplingRule rule);
