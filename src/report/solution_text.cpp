@@ -112,6 +112,29 @@ std::string compared_section(const SolutionReport& report) {
   return "Methods compared\n" + table_text(rows) + notes;
 }
 
+/// From the main cursor down to the eye that is left, both sides of the inner eye counted.
+std::string budget_section(const SolutionReport& report) {
+  const Score& s = report.solution.score;
+  Rows rows{{"main cursor opens", mv(2.0 * s.signal_v) + " mV"}};
+  const auto take = [&](const std::string& what, double half_v) {
+    if (half_v > 0.0) rows.push_back({what, mv(-2.0 * half_v) + " mV"});
+  };
+  take("residual intersymbol interference", s.isi_v);
+  for (std::size_t i = 0; i < s.aggressors_v.size(); ++i) {
+    take("crosstalk, " + printable_text(report.model->link.crosstalk[i].name, 30), s.aggressors_v[i]);
+  }
+  take("dual-Dirac jitter", s.dual_dirac_v);
+  take("noise and random jitter, " + mv(s.sigma_v) + " mV RMS", s.gaussian_v);
+  take("slicer sensitivity", s.sensitivity_v);
+  const double left_v = 2.0 * (s.signal_v - s.isi_v - s.crosstalk_v - s.dual_dirac_v - s.gaussian_v - s.sensitivity_v);
+  rows.push_back({"left, worst case", mv(left_v) + " mV"});
+  std::string text = "What holds it back\n" + table_text(rows);
+  // Under a mask the height is the least over phases, and this the budget of one.
+  if (left_v - s.height.worst_case_v > 1e-9) text += "  (at the sampling instant; the score is the least under the mask)\n";
+  for (const std::string& line : report.limited_by) text += item_text("  ", line);
+  return text;
+}
+
 std::string sensitivity_section(const std::vector<KnobSensitivity>& all) {
   Rows rows{{"knob", "at", "-1 code", "+1 code", "-1, DFE follows", "+1, DFE follows"}};
   for (const KnobSensitivity& s : all) {
@@ -148,15 +171,15 @@ std::vector<std::string> proof_lines(const Proof& proof) {
   switch (proof.kind) {
     case Proof::Kind::kProven:
       lines.push_back("Proven: no setting within the limits opens the eye further than " + mv(proof.bound_v) + " mV (gap " +
-                      fixed(v_to_mv(proof.gap_v), 3) + " mV). " + proof.reason);
+                      fixed(v_to_mv(proof.gap_v), 3) + " mV): " + proof.reason + ".");
       break;
     case Proof::Kind::kBounded:
       lines.push_back("Bounded: no setting within the limits opens the eye further than " + mv(proof.bound_v) +
-                      " mV; at most " + mv(proof.gap_v) + " mV are left. " + proof.reason);
+                      " mV; at most " + mv(proof.gap_v) + " mV are left: " + proof.reason + ".");
       break;
-    case Proof::Kind::kExhausted: lines.push_back("Exhausted: every code was scored. " + proof.reason); break;
+    case Proof::Kind::kExhausted: lines.push_back("Exhausted: " + proof.reason + "."); break;
     case Proof::Kind::kNone:
-      if (!proof.reason.empty()) lines.push_back("No claim. " + proof.reason);
+      if (!proof.reason.empty()) lines.push_back("No claim: " + proof.reason + ".");
       break;
   }
   if (proof.num_cells > 0) {
@@ -209,8 +232,7 @@ std::string text_of(const SolutionReport& report) {
   if (!s.compared.empty()) text += compared_section(report) + "\n";
   const std::string steps = sensitivity_section(report.sensitivity);
   if (!steps.empty()) text += steps + "\n";
-  text += "What holds it back\n";
-  for (const std::string& line : report.limited_by) text += item_text("  ", line);
+  text += budget_section(report);
   text += "\nTaken as given\n";
   for (const std::string& line : assumption_lines(report)) text += item_text("  ", line);
   return text + "\n" + item_text("", caution());

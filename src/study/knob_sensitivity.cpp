@@ -40,29 +40,7 @@ std::vector<KnobSensitivity> knob_sensitivity(const EyeModel& model, const Setti
 
 std::vector<std::string> what_limits(const EyeModel& model, const Settings& settings,
                                      const Score& score) {
-  const auto mv = [](double v) { return fixed(v_to_mv(v), 1) + " mV"; };
-  struct Part {
-    double cost_v;
-    std::string text;
-  };
-  std::vector<Part> parts;
-  // Half heights as the budget has them; both sides of the eye lose them.
-  const auto add = [&](double half_v, const std::string& what) {
-    if (half_v > 0.0005 * std::abs(score.signal_v)) {
-      parts.push_back({half_v, what + " takes " + mv(2.0 * half_v) + " of the " +
-                                   mv(2.0 * score.signal_v) + " that the main cursor opens"});
-    }
-  };
-  add(score.isi_v, "residual intersymbol interference");
-  add(score.crosstalk_v, "crosstalk");
-  add(score.dual_dirac_v, "dual-Dirac jitter");
-  add(score.gaussian_v, "noise and random jitter (" + mv(score.sigma_v) + " RMS)");
-  add(score.sensitivity_v, "slicer sensitivity");
-  std::stable_sort(parts.begin(), parts.end(),
-                   [](const Part& a, const Part& b) { return a.cost_v > b.cost_v; });
   std::vector<std::string> lines;
-  for (Part& part : parts) lines.push_back(std::move(part.text));
-
   // A knob with one value has no say; neither has a zero end of a one-sided tap range.
   for (const KnobReading& r : readings(model.link.device, settings)) {
     if (r.at_least == r.at_most) continue;

@@ -33,8 +33,8 @@ struct KnobSensitivity {
 /// The settings with sampling instant by the link's rule and DFE at its best for it.
 [[nodiscard]] Settings readapted(const EyeModel& model, const Settings& settings);
 
-/// Sentences on what holds the eye back, the largest part first: parts of the budget, knobs at a
-/// rail, the FIR's peak limit, the receiver's input limit.
+/// Sentences on the limits that the setting runs into: knobs at the end of their range, the FIR's
+/// peak limit, the receiver's input limit. Empty when none.
 [[nodiscard]] std::vector<std::string> what_limits(const EyeModel& model, const Settings& settings,
                                                    const Score& score);
 

@@ -72,6 +72,28 @@ const boxPainter = {
   },
 };
 
+/** Straight lines across a bar chart, such as a target. */
+const guidePainter = {
+  id: "guides",
+  afterDatasetsDraw(chart) {
+    const paint = chart.ctx, area = chart.chartArea;
+    for (const guide of chart.config.options.guides || []) {
+      const at = chart.scales.x.getPixelForValue(guide.at);
+      paint.save();
+      paint.strokeStyle = themeColour("--ink");
+      paint.fillStyle = themeColour("--ink");
+      paint.setLineDash([6, 4]);
+      paint.beginPath();
+      paint.moveTo(at, area.top);
+      paint.lineTo(at, area.bottom);
+      paint.stroke();
+      paint.textAlign = at > (area.left + area.right) / 2 ? "right" : "left";
+      paint.fillText(" " + guide.name + " ", at, area.top + 10);
+      paint.restore();
+    }
+  },
+};
+
 /** Lines from zero up or down to each cursor. */
 const stemPainter = {
   id: "stems",
@@ -168,6 +190,7 @@ function barChart(figure) {
     data: { labels: shown, datasets },
     options: {
       indexAxis: "y",
+      guides: figure.guides,
       scales: {
         x: axisOptions(figure.x),
         y: { ticks: { color: ink, autoSkip: false }, grid: { display: false, borderColor: ink } },
@@ -201,7 +224,7 @@ function drawFigure(figure) {
       },
     },
   });
-  config.plugins = [fieldPainter, boxPainter, stemPainter];
+  config.plugins = [fieldPainter, boxPainter, guidePainter, stemPainter];
   charts.set(figure.id, new Chart(canvas, config));
 }
 
