@@ -30,6 +30,7 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
     const FirTap& tap = limits.taps[at(i)];
     positions_.push_back(tap.position);
     Knob knob{tap.min, tap.max, {}};
+    int first_code = 0;
     if (fixed) {
       knob.lo = knob.hi = (*fixed)[i];
       knob.values = {knob.lo};
@@ -38,7 +39,10 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
       continue;
     } else {
       for (const Code& code : tap.codes) {
-        if (i == main_index_ && limits.min_main && code.value < *limits.min_main - 0.5e-9) continue;
+        if (i == main_index_ && limits.min_main && code.value < *limits.min_main - 0.5e-9) {
+          ++first_code;
+          continue;
+        }
         knob.values.push_back(code.value);
         whole = whole && is_whole_nano(code.value);
       }
@@ -52,6 +56,7 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
       }
     }
     free_.push_back(i);
+    first_code_.push_back(first_code);
     knobs_.push_back(std::move(knob));
   }
   if (fixed) peak_limit_ = std::max(peak_limit_, fixed->lpNorm<1>());
@@ -61,27 +66,39 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
 std::vector<Box> FirSpace::roots(const std::vector<Knob>& all_knobs) const {
   if (is_empty_) return {};
   std::vector<Box> boxes{Box::whole(all_knobs)};
-  if (remainder_ < 0) return boxes;
-  for (int i = 0; i < num_free(); ++i) {
-    const Knob& knob = all_knobs[at(i)];
-    if (knob.lo >= 0.0 || knob.hi <= 0.0) continue;
-    const std::size_t before = boxes.size();
-    for (std::size_t b = 0; b < before; ++b) {
-      Box upper = boxes[b];
-      if (knob.values.empty()) {
-        boxes[b].hi[at(i)] = 0.0;
+  for (const int i : straddling(all_knobs)) {
+    std::vector<Box> halves;
+    for (const Box& box : boxes) {
+      Box lower = box;
+      Box upper = box;
+      const int split = first_positive(all_knobs, i);
+      if (split < 0) {
+        lower.hi[at(i)] = 0.0;
         upper.lo[at(i)] = 0.0;
       } else {
-        const int first_positive = static_cast<int>(
-            std::upper_bound(knob.values.begin(), knob.values.end(), 0.0) - knob.values.begin());
-        const int last = static_cast<int>(knob.values.size()) - 1;
-        boxes[b].set_codes(all_knobs, at(i), 0, first_positive - 1);
-        upper.set_codes(all_knobs, at(i), first_positive, last);
+        lower.set_codes(all_knobs, at(i), 0, split - 1);
+        upper.set_codes(all_knobs, at(i), split, box.last[at(i)]);
       }
-      boxes.push_back(std::move(upper));
+      halves.push_back(std::move(lower));
+      halves.push_back(std::move(upper));
     }
+    boxes = std::move(halves);
   }
   return boxes;
+}
+
+std::vector<int> FirSpace::straddling(const std::vector<Knob>& all_knobs) const {
+  std::vector<int> knobs;
+  for (int i = 0; remainder_ >= 0 && i < num_free(); ++i) {
+    if (all_knobs[at(i)].lo < 0.0 && all_knobs[at(i)].hi > 0.0) knobs.push_back(i);
+  }
+  return knobs;
+}
+
+int FirSpace::first_positive(const std::vector<Knob>& all_knobs, int knob) {
+  const std::vector<double>& values = all_knobs[at(knob)].values;
+  if (values.empty()) return -1;
+  return static_cast<int>(std::upper_bound(values.begin(), values.end(), 0.0) - values.begin());
 }
 
 void FirSpace::expand(std::span<const double> x, std::span<double> taps) const {

@@ -25,9 +25,15 @@ class FirSpace {
   /// No setting has a larger sum |c_i|.
   [[nodiscard]] double peak_limit() const { return peak_limit_; }
   [[nodiscard]] int main_index() const { return main_index_; }
-  /// `whole` with the FIR knobs (its first num_free) cut so that no box straddles zero where the
-  /// remainder's sum |others| needs that.
+  [[nodiscard]] int tap_of(int knob) const { return free_[static_cast<std::size_t>(knob)]; }
+  /// Codes of the tap that the least main tap forbids: index in FirTap::codes of the knob's first.
+  [[nodiscard]] int first_code(int knob) const { return first_code_[static_cast<std::size_t>(knob)]; }
+  /// Boxes that cover all knobs (the FIR's are the first num_free), cut at zero where the remainder's
+  /// sum |others| needs one sign: each of `straddling` in turn, lower half first.
   [[nodiscard]] std::vector<Box> roots(const std::vector<Knob>& all_knobs) const;
+  [[nodiscard]] std::vector<int> straddling(const std::vector<Knob>& all_knobs) const;
+  /// Index of the knob's first code above zero, or -1 if it is real.
+  [[nodiscard]] static int first_positive(const std::vector<Knob>& all_knobs, int knob);
   /// All taps from the free ones.
   void expand(std::span<const double> x, std::span<double> taps) const;
   /// Slopes by the free taps from slopes by all taps; returns what is added to the constant.
@@ -42,6 +48,7 @@ class FirSpace {
   FirLimits limits_;
   std::vector<Knob> knobs_;
   std::vector<int> free_;  ///< index in limits_.taps
+  std::vector<int> first_code_;
   std::vector<int> positions_;
   int main_index_ = 0;
   int remainder_ = -1;

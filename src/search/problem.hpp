@@ -42,6 +42,9 @@ class Problem {
   virtual void add_rows(const Box&, CuttingPlanes&) {}
   /// height(y) <= a y + b for every y of the box. Returns b.
   virtual double cut(const Box& box, std::span<const double> x, std::span<double> a) = 0;
+  /// What a certificate must know about the last cut beside its x: the taps at which its crosstalk
+  /// was taken. Empty when there is none.
+  [[nodiscard]] virtual std::vector<double> side_point() const { return {}; }
   /// Adds the rows or sharpens the cuts that x still violates; false if there are none. `thorough`
   /// is asked for when everything cheap has converged.
   virtual bool separate(const Box&, std::span<const double>, CuttingPlanes&, bool /*thorough*/) {

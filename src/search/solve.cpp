@@ -9,6 +9,7 @@
 #include "search/worst_case_cell.hpp"
 #include "search/worst_case_search.hpp"
 #include "tapwright/eye/sampling.hpp"
+#include "tapwright/search/classical.hpp"
 
 namespace tapwright {
 namespace {
@@ -105,6 +106,7 @@ Solution solve(const EyeModel& given, const SearchOptions& options, const RunCon
   const EyeModel& model = changed ? *changed : given;
 
   Solution solution;
+  if (options.compare) solution.compared = classical_methods(model);
   SearchResult result = search::worst_case_search(model, options, control);
   solution.trail = std::move(result.trail);
   solution.certificate = std::move(result.certificate);

@@ -66,11 +66,13 @@ Relaxer::Relaxer(Problem& problem)
       a_(problem.knobs().size()),
       point_(problem.knobs().size()) {}
 
-void Relaxer::add_cut(const Box& box, std::span<const double> x) {
-  const double b = problem_->cut(box, x, a_);
+/// The cut that the problem just gave in a_ and b, made at x.
+void Relaxer::add_cut(std::span<const double> x, double b) {
   planes_.add_cut(a_, b);
   points_.resize(at(planes_.num_rows()));
   points_.back().assign(x.begin(), x.end());
+  side_points_.resize(points_.size());
+  side_points_.back() = problem_->side_point();
   cuts_.insert(cuts_.end(), a_.begin(), a_.end());
   cuts_.push_back(b);
   ++num_cuts_;
@@ -79,13 +81,16 @@ void Relaxer::add_cut(const Box& box, std::span<const double> x) {
 void Relaxer::reset(const Box& root, std::span<const double> start) {
   planes_.clear();
   points_.clear();
+  side_points_.clear();
   cuts_.clear();
   planes_.set_box(root.lo, root.hi);
   problem_->add_rows(root, planes_);
+  points_.resize(at(planes_.num_rows()));
+  side_points_.resize(points_.size());
   for (std::size_t i = 0; i < point_.size(); ++i) {
     point_[i] = std::clamp(start[i], root.lo[i], root.hi[i]);
   }
-  add_cut(root, point_);
+  add_cut(point_, problem_->cut(root, point_, a_));
   planes_.start_from_cut(planes_.num_rows() - 1);
 }
 
@@ -107,6 +112,7 @@ Relaxation Relaxer::relax(const Box& box, double stop_below_v, const CuttingPlan
       if (!problem_->separate(box, point_, planes_, thorough)) return false;
       if (planes_.num_rows() > static_cast<int>(points_.size())) {
         points_.resize(at(planes_.num_rows()));
+        side_points_.resize(points_.size());
         if (thorough) points_.back() = point_;
       }
       return true;
@@ -116,16 +122,11 @@ Relaxation Relaxer::relax(const Box& box, double stop_below_v, const CuttingPlan
     double height = b;
     for (std::size_t i = 0; i < a_.size(); ++i) height += a_[i] * point_[i];
     if (t - height > kConverged) {
-      planes_.add_cut(a_, b);
-      points_.resize(at(planes_.num_rows()));
-      points_.back() = point_;
-      cuts_.insert(cuts_.end(), a_.begin(), a_.end());
-      cuts_.push_back(b);
-      ++num_cuts_;
+      add_cut(point_, b);
       continue;
     }
     if (separated(true)) {
-      add_cut(box, std::vector<double>(point_));
+      add_cut(point_, problem_->cut(box, point_, a_));
       continue;
     }
     return {Relaxation::Status::kConverged, t};
@@ -147,9 +148,15 @@ Multipliers Relaxer::multipliers() const {
   Multipliers result;
   for (int row = 0; row < planes_.num_rows(); ++row) {
     const double weight = planes_.multiplier(row);
-    if (weight <= 0.0 || points_[at(row)].empty()) continue;
-    (planes_.is_cut(row) ? result.points : result.row_points).push_back(points_[at(row)]);
-    (planes_.is_cut(row) ? result.weights : result.row_weights).push_back(weight);
+    if (weight <= 0.0) continue;
+    if (planes_.is_cut(row)) {
+      result.points.push_back(points_[at(row)]);
+      result.side_points.push_back(side_points_[at(row)]);
+      result.weights.push_back(weight);
+    } else if (!points_[at(row)].empty()) {
+      result.row_points.push_back(points_[at(row)]);
+      result.row_weights.push_back(weight);
+    }
   }
   return result;
 }
@@ -442,7 +449,8 @@ void round_and_move(Problem& problem, std::span<const double> x, Best& best,
     for (const int i : coded) {
       const double excess = std::abs(value[at(i)]) - std::abs(x[at(i)]);
       const int inward = value[at(i)] > 0.0 ? code[at(i)] - 1 : code[at(i)] + 1;
-      if (excess > most && inward >= 0 && inward < static_cast<int>(knobs[at(i)].values.size())) {
+      if (excess > most && inward >= 0 && inward < static_cast<int>(knobs[at(i)].values.size()) &&
+          std::abs(knobs[at(i)].values[at(inward)]) < std::abs(value[at(i)])) {
         most = excess;
         worst = i;
       }

@@ -38,6 +38,7 @@ class Best {
 struct Multipliers {
   std::vector<std::vector<double>> points;
   std::vector<double> weights;
+  std::vector<std::vector<double>> side_points;  ///< see Problem::side_point; one a point
   std::vector<std::vector<double>> row_points;  ///< where rows beyond the FIR's limits were made
   std::vector<double> row_weights;
 };
@@ -71,7 +72,7 @@ class Relaxer {
   [[nodiscard]] std::int64_t num_cuts() const { return num_cuts_; }
 
  private:
-  void add_cut(const Box& box, std::span<const double> x);
+  void add_cut(std::span<const double> x, double b);
 
   Problem* problem_;
   CuttingPlanes planes_;
@@ -79,6 +80,7 @@ class Relaxer {
   std::vector<double> point_;
   /// Where each row was made; empty for the FIR's own limits.
   std::vector<std::vector<double>> points_;
+  std::vector<std::vector<double>> side_points_;
   std::vector<double> cuts_;  ///< dim slopes and a constant each, for bound_at
   std::int64_t num_cuts_ = 0;
 };

@@ -185,7 +185,7 @@ double WorstCaseCell::victim(std::span<double> slopes) {
       for (std::size_t i = 0; dfe.relative && i < n; ++i) {
         slopes[i] += dfe.limit * row_.at(0, positions[i]);
       }
-    } else if (q != 0.0) {
+    } else {
       half += std::abs(q);
       for (std::size_t i = 0; i < n; ++i) {
         slopes[i] += q < 0.0 ? -row_.at(dfe.position, positions[i])
@@ -225,24 +225,28 @@ double WorstCaseCell::cut(const Box& box, std::span<const double> x, std::span<d
   space.expand(x, taps_);
   const double half = victim(by_taps_);
   double constant = half - dot(taps_, by_taps_);
-  if (!crosstalk_cuts_.empty()) {
-    const CrosstalkCut* worst = nullptr;
-    double most = 0.0;
-    for (const CrosstalkCut& known : crosstalk_cuts_) {
-      const double value = known.constant + dot(known.slopes, taps_);
-      if (value > most) {
-        most = value;
-        worst = &known;
-      }
+  crosstalk_in_use_ = crosstalk_cuts_.size();
+  double most = 0.0;
+  for (std::size_t i = 0; i < crosstalk_cuts_.size(); ++i) {
+    const double value = crosstalk_cuts_[i].constant + dot(crosstalk_cuts_[i].slopes, taps_);
+    if (value > most) {
+      most = value;
+      crosstalk_in_use_ = i;
     }
-    if (worst != nullptr) {
-      constant -= worst->constant;
-      for (std::size_t i = 0; i < taps_.size(); ++i) by_taps_[i] -= worst->slopes[i];
-    }
+  }
+  if (crosstalk_in_use_ < crosstalk_cuts_.size()) {
+    const CrosstalkCut& worst = crosstalk_cuts_[crosstalk_in_use_];
+    constant -= worst.constant;
+    for (std::size_t i = 0; i < taps_.size(); ++i) by_taps_[i] -= worst.slopes[i];
   }
   constant += space.reduce(box, by_taps_, a);
   for (int i = 0; i < space.num_free(); ++i) a[at(i)] *= state_->scale_;
   return state_->scale_ * constant;
+}
+
+std::vector<double> WorstCaseCell::side_point() const {
+  if (crosstalk_in_use_ >= crosstalk_cuts_.size()) return {};
+  return crosstalk_cuts_[crosstalk_in_use_].taps;
 }
 
 bool WorstCaseCell::separate(const Box& box, std::span<const double> x, CuttingPlanes& planes,
@@ -265,7 +269,7 @@ bool WorstCaseCell::separate(const Box& box, std::span<const double> x, CuttingP
                                                  static_cast<Eigen::Index>(taps_.size()));
     const CrosstalkPeak peak = crosstalk_peak(state_->eye_, taps);
     const double amplitude_v = state_->eye_.amplitude_v;
-    CrosstalkCut fresh{{}, (peak.worst_v - peak.supergradient.dot(taps)) / amplitude_v};
+    CrosstalkCut fresh{{}, (peak.worst_v - peak.supergradient.dot(taps)) / amplitude_v, taps_};
     for (const double slope : peak.supergradient) fresh.slopes.push_back(slope / amplitude_v);
     double known = 0.0;
     for (const CrosstalkCut& old : crosstalk_cuts_) {

@@ -88,6 +88,7 @@ class WorstCaseCell final : public Problem {
     state_->space_->add_rows(box, planes);
   }
   double cut(const Box& box, std::span<const double> x, std::span<double> a) override;
+  [[nodiscard]] std::vector<double> side_point() const override;
   bool separate(const Box& box, std::span<const double> x, CuttingPlanes& planes,
                 bool thorough) override;
   double exact(std::span<const double> x, double worth) override;
@@ -118,8 +119,10 @@ class WorstCaseCell final : public Problem {
   struct CrosstalkCut {
     std::vector<double> slopes;
     double constant = 0.0;
+    std::vector<double> taps;  ///< where it was made
   };
   std::vector<CrosstalkCut> crosstalk_cuts_;
+  std::size_t crosstalk_in_use_ = 0;  ///< of the last cut; one past the end = none
 };
 
 }  // namespace tapwright::search

@@ -291,40 +291,67 @@ class Search {
     if (options_.certificate && result_.proven) result_.certificate = certificate();
   }
 
+  [[nodiscard]] Eigen::VectorXd all_taps(const std::vector<double>& x) const {
+    std::vector<double> taps(static_cast<std::size_t>(space_.num_taps()));
+    space_.expand(x, taps);
+    return Eigen::Map<const Eigen::VectorXd>(taps.data(), static_cast<Eigen::Index>(taps.size()));
+  }
+
+  void add_nodes(const std::vector<TreeNode>& tree, Certificate& proof,
+                 Certificate::Cell& cell) const {
+    for (const TreeNode& node : tree) {
+      Certificate::Node out;
+      out.kind = static_cast<Certificate::Node::Kind>(node.kind);
+      out.tap = space_.tap_of(node.knob);
+      out.at = node.at + space_.first_code(node.knob);
+      if (node.kind == TreeNode::Kind::kBound || node.kind == TreeNode::Kind::kEmpty) {
+        Certificate::Multipliers multipliers;
+        multipliers.cell = proof.cells.size();
+        for (const auto& x : node.multipliers.points) multipliers.points.push_back(all_taps(x));
+        for (const auto& x : node.multipliers.row_points) {
+          multipliers.input_points.push_back(all_taps(x));
+        }
+        multipliers.weights = node.multipliers.weights;
+        if (!model_.link.crosstalk.empty()) {
+          for (const auto& side : node.multipliers.side_points) {
+            multipliers.crosstalk_points.emplace_back(Eigen::Map<const Eigen::VectorXd>(
+                side.data(), static_cast<Eigen::Index>(side.size())));
+          }
+        }
+        multipliers.input_weights = node.multipliers.row_weights;
+        out.multipliers = proof.multipliers.size();
+        proof.multipliers.push_back(std::move(multipliers));
+      }
+      cell.nodes.push_back(out);
+    }
+  }
+
+  /// The root boxes as one tree: a cut at zero for each straddling knob, then the boxes' own trees.
+  void add_trees(const std::vector<int>& straddling, std::size_t depth,
+                 std::vector<std::vector<TreeNode>>::const_iterator& tree, Certificate& proof,
+                 Certificate::Cell& cell) const {
+    if (depth == straddling.size()) {
+      add_nodes(*tree++, proof, cell);
+      return;
+    }
+    const int knob = straddling[depth];
+    const int first_positive = FirSpace::first_positive(space_.knobs(), knob);
+    cell.nodes.push_back({Certificate::Node::Kind::kSplit, space_.tap_of(knob),
+                          first_positive < 0 ? -1 : first_positive + space_.first_code(knob), 0});
+    add_trees(straddling, depth + 1, tree, proof, cell);
+    add_trees(straddling, depth + 1, tree, proof, cell);
+  }
+
   [[nodiscard]] Certificate certificate() const {
     Certificate proof;
     proof.bound_v = result_.bound_v;
-    const auto taps = [&](const std::vector<double>& x) {
-      std::vector<double> all(static_cast<std::size_t>(space_.num_taps()));
-      space_.expand(x, all);
-      return Eigen::VectorXd(
-          Eigen::Map<const Eigen::VectorXd>(all.data(), static_cast<Eigen::Index>(all.size())));
-    };
+    const std::vector<int> straddling = space_.straddling(space_.knobs());
     for (std::size_t s = 0; s < states_.size(); ++s) {
       for (const ClosedCell& closed : closed_[s]) {
         const Place& place = states_[s]->place();
         Certificate::Cell cell{place.swing_index, place.ctle_index, closed.phase_samples, {}};
-        for (const std::vector<TreeNode>& tree : closed.trees) {
-          for (const TreeNode& node : tree) {
-            Certificate::Node out;
-            out.kind = static_cast<Certificate::Node::Kind>(node.kind);
-            out.tap = node.knob;
-            out.at = node.at;
-            out.multipliers = proof.multipliers.size();
-            if (node.kind == TreeNode::Kind::kBound || node.kind == TreeNode::Kind::kEmpty) {
-              Certificate::Multipliers multipliers;
-              multipliers.cell = proof.cells.size();
-              for (const auto& x : node.multipliers.points) multipliers.points.push_back(taps(x));
-              for (const auto& x : node.multipliers.row_points) {
-                multipliers.input_points.push_back(taps(x));
-              }
-              multipliers.weights = node.multipliers.weights;
-              multipliers.input_weights = node.multipliers.row_weights;
-              proof.multipliers.push_back(std::move(multipliers));
-            }
-            cell.nodes.push_back(out);
-          }
-        }
+        auto tree = closed.trees.begin();
+        add_trees(straddling, 0, tree, proof, cell);
         proof.cells.push_back(std::move(cell));
       }
     }

@@ -9,6 +9,7 @@
 #include "search/random_link.hpp"
 #include "support/python.hpp"
 #include "tapwright/eye/sampling.hpp"
+#include "tapwright/search/certificate.hpp"
 
 namespace tapwright {
 namespace {
@@ -62,11 +63,18 @@ constexpr double kRoundingV = 60 * 2.2e-16 * 4.0;
 
 void expect_best(const EyeModel& model, const std::string& what) {
   SCOPED_TRACE(what);
-  const Solution solution = solve(model);
+  SearchOptions options;
+  options.certificate = true;
+  options.compare = false;
+  const Solution solution = solve(model, options);
   const double best_v = best_by_enumeration(model);
   EXPECT_EQ(solution.proof.kind, Proof::Kind::kProven) << solution.proof.reason;
   EXPECT_NEAR(solution.score.height.worst_case_v, best_v, kRoundingV);
   EXPECT_EQ(solution.proof.gap_v, 0.0);
+  ASSERT_TRUE(solution.certificate);
+  const CertificateCheck check = check_certificate(model, *solution.certificate);
+  EXPECT_TRUE(check.holds) << check.reason;
+  EXPECT_NEAR(check.bound_v, best_v, 1e-12);  // rounding of the stored weights
 }
 
 // Independent: full enumeration through the eye room's own sum.
@@ -179,8 +187,13 @@ TEST(Solve, EqualsHighsOnTwoHundredRandomLinks) {
     shape.num_codes = i % 2 == 0 ? 0 : 9 + i % 8;
     shape.straddle = (i / 5) % 2 == 0;
     const EyeModel model = test::random_model(random, shape);
-    const Solution solution = solve(model);
+    SearchOptions options;
+    options.certificate = true;
+    options.compare = false;
+    const Solution solution = solve(model, options);
     EXPECT_EQ(solution.proof.kind, Proof::Kind::kProven) << "link " << i;
+    const CertificateCheck check = check_certificate(model, *solution.certificate);
+    EXPECT_TRUE(check.holds) << "link " << i << ": " << check.reason;
     heights_v.push_back(solution.score.height.worst_case_v);
     problems.push_back(problem_of(model));
   }

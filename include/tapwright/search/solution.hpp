@@ -51,13 +51,17 @@ struct TrailStep {
 /// For independent symbols any numbers s_k in [-1, 1] bound every setting c of a box:
 ///   E/2 <= max over the box of sum_i c_i (p_{-i} w - sum_{k != 0} s_k p_{k-i}) + sum_k D_k |s_k|
 /// (w = 1/(L-1); crosstalk, jitter and noise enter likewise). The s_k are stored as what made them:
-/// `points` and `weights` of one cell, s_k = sum_j weights_j sign(q_k(points_j)). Any points and any
-/// weights that are >= 0 and sum to 1 give a valid bound, so rounding in a search can't void it.
+/// `points` and `weights` of one cell, s_k = sum_j weights_j sign(q_k(points_j)), where sign(0) = 1
+/// and a DFE cursor within its limit counts 0. Any points and any weights that are >= 0 and sum to 1
+/// give a valid bound, so rounding in a search can't void it.
 struct Certificate {
   struct Multipliers {
     std::size_t cell = 0;  ///< index in `cells` of the pulses that the signs were taken from
     std::vector<Eigen::VectorXd> points;  ///< FIR taps, each (num taps)
     std::vector<double> weights;          ///< one a point
+    /// Taps whose worst crosstalk phase and signs each point's bound uses; an entry without taps
+    /// leaves crosstalk out. Empty when the link has none.
+    std::vector<Eigen::VectorXd> crosstalk_points;
     std::vector<Eigen::VectorXd> input_points;  ///< taps where the peak-input limit was cut
     std::vector<double> input_weights;          ///< >= 0; one an input point
   };
@@ -65,13 +69,14 @@ struct Certificate {
   /// half, then those of its upper half.
   struct Node {
     enum class Kind {
-      kSplit,   ///< tap `tap`: codes [.., at) in the lower half, [at, ..) in the upper
+      kSplit,   ///< tap `tap`: codes [.., at) in the lower half, [at, ..) in the upper; a tap
+                ///< without codes at 0, then `at` is -1
       kBound,   ///< closed by multipliers[multipliers]
-      kScored,  ///< one setting, scored
+      kScored,  ///< every setting of the box, scored one by one
       kEmpty,   ///< multipliers[multipliers] (or the FIR's own limits) show that nothing is allowed
     };
     Kind kind = Kind::kBound;
-    int tap = 0;
+    int tap = 0;  ///< index in FirLimits::taps
     int at = 0;
     std::size_t multipliers = 0;
   };
