@@ -24,8 +24,27 @@ constexpr double kEta0 = kMu0 * kSpeedOfLightMPerS;
 /// Impedance with air everywhere, and the share of the field's energy in the dielectric.
 struct Geometry {
   double z_air_ohm = 0.0;
-  double filling = 1.0;  ///< eps_eff = 1 + filling (eps_r - 1)
+  double filling = 1.0;  ///< eps_eff = 1 + filling (eps_r - 1), at low frequencies
 };
+
+/// Kirschning and Jansen 1982 (constants from memory): eps_eff moves from its static value towards
+/// eps_r by P / (1 + P); so the filling moves towards 1.
+double filling_at(const Microstrip& strip, double filling, double eps_r, double f) {
+  const double u = strip.width_m / strip.height_m;
+  const double fh = f * 1e-9 * strip.height_m * 1e3;  // GHz mm
+  const double p1 = 0.27488 + (0.6315 + 0.525 / std::pow(1 + 0.0157 * fh, 20)) * u -
+                    0.065683 * std::exp(-8.7513 * u);
+  const double p2 = 0.33622 * (1 - std::exp(-0.03442 * eps_r));
+  const double p3 = 0.0363 * std::exp(-4.6 * u) * (1 - std::exp(-std::pow(fh / 38.7, 4.97)));
+  const double p4 = 1 + 2.751 * (1 - std::exp(-std::pow(eps_r / 15.916, 8)));
+  const double p = p1 * p2 * std::pow((0.1844 + p3 * p4) * fh, 1.5763);
+  return 1 - (1 - filling) / (1 + p);
+}
+
+template <class Homogeneous>
+double filling_at(const Homogeneous& /*shape*/, double filling, double /*eps_r*/, double /*f*/) {
+  return filling;
+}
 
 /// Hammerstad and Jensen 1980: impedance of a strip of u = width / height in air, eq. (1).
 double microstrip_air_ohm(double u) {
@@ -163,6 +182,10 @@ void check(const AnnexLine& line, Checker& checker) {
   checker.not_negative("a2", line.a2_s_per_m);
   checker.not_negative("delay per metre", line.tau_s_per_m);
   checker.positive("impedance", line.z_c_ohm);
+  if (line.dispersion) {
+    checker.not_negative("rise of the permittivity", line.dispersion->rise);
+    checker.positive("knee of the dispersion", line.dispersion->knee_hz);
+  }
 }
 
 void check(const DatasheetLine& line, Checker& checker) {
@@ -264,10 +287,15 @@ struct Immittances {
 Immittances immittances(const AnnexLine& line, const Eigen::VectorXd& f) {
   Eigen::VectorXcd gamma(f.size());
   for (Eigen::Index k = 0; k < f.size(); ++k) {
-    gamma[k] = line.gamma0_per_m + line.a1_sqrt_s_per_m * std::sqrt(f[k]) * Complex(1, 1) +
-               Complex(line.a2_s_per_m * f[k],
-                       2 * pi * f[k] * line.tau_s_per_m -
-                           line.a2_s_per_m * (2 / pi) * f[k] * std::log(f[k] * 1e-9));
+    double tau = line.tau_s_per_m;
+    if (line.dispersion) {
+      const double x = f[k] / line.dispersion->knee_hz;
+      tau *= std::sqrt(1 + line.dispersion->rise * x * x / (1 + x * x));
+    }
+    gamma[k] =
+        line.gamma0_per_m + line.a1_sqrt_s_per_m * std::sqrt(f[k]) * Complex(1, 1) +
+        Complex(line.a2_s_per_m * f[k],
+                2 * pi * f[k] * tau - line.a2_s_per_m * (2 / pi) * f[k] * std::log(f[k] * 1e-9));
   }
   return {gamma * line.z_c_ohm, gamma / line.z_c_ohm};
 }
@@ -311,8 +339,13 @@ Immittances immittances(const PhysicalLine& line, const Eigen::VectorXd& f) {
     }
     out.z_ohm_per_m[k] =
         std::sqrt(Complex(r_dc * r_dc, 2 * r_hf * r_hf)) + Complex(0, w * l_h_per_m);
+    const double filling = std::visit(
+        [&](const auto& shape) {
+          return filling_at(shape, ideal.filling, line.dielectric.eps_r, f[k]);
+        },
+        line.geometry);
     out.y_s_per_m[k] =
-        Complex(0, w * c_air_f_per_m) * (1.0 + ideal.filling * (dielectric.at(f[k]) - 1.0));
+        Complex(0, w * c_air_f_per_m) * (1.0 + filling * (dielectric.at(f[k]) - 1.0));
   }
   return out;
 }

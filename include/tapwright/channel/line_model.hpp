@@ -1,8 +1,7 @@
 #pragma once
-// Uniform lines from a formula, a data sheet or dimensions, and a model fitted to a measurement.
+// Uniform lines from a formula, a data sheet, constants per metre or dimensions.
 
 #include <Eigen/Core>
-#include <array>
 #include <optional>
 #include <string_view>
 #include <variant>
@@ -13,16 +12,28 @@
 
 namespace tapwright {
 
+/// What a line open to the air adds: the permittivity seen rises with frequency.
+///
+///     tau(f) = tau sqrt(1 + rise x^2 / (1 + x^2)),  x = f / knee_hz
+///
+/// Source: the form of Getsinger, IEEE Trans. MTT 21(1), 1973.
+struct Dispersion {
+  double rise = 0.0;  ///< of the permittivity, as a ratio, far above the knee
+  double knee_hz = 0.0;
+};
+
 /// gamma = gamma0 + a1 (1 + j) sqrt(f) + a2 f (1 - j (2/pi) ln(f / 1 GHz)) + j 2 pi f tau.
 ///
 /// Units:  gamma0 in 1/m, a1 in sqrt(s)/m, a2 and tau in s/m, all per base SI.
-/// Source: IEEE 802.3 Annex 93A. Limits: causal within the band used, not for all frequencies.
+/// Source: IEEE 802.3 Annex 93A; the annex has no dispersion.
+/// Limits: causal within the band used, not for all frequencies.
 struct AnnexLine {
   double gamma0_per_m = 0.0;
   double a1_sqrt_s_per_m = 0.0;
   double a2_s_per_m = 0.0;
   double tau_s_per_m = 0.0;
   double z_c_ohm = 0.0;
+  std::optional<Dispersion> dispersion = std::nullopt;
 };
 
 /// The annex's own units: gamma0 in 1/mm, a1 in sqrt(ns)/mm, a2 and tau in ns/mm.
@@ -48,7 +59,8 @@ struct RlgcLine {
   double c_f_per_m = 0.0;
 };
 
-/// Strip over one plane. Source: Hammerstad and Jensen, IEEE MTT-S 1980.
+/// Strip over one plane. Source: Hammerstad and Jensen, IEEE MTT-S 1980; dispersion by Kirschning
+/// and Jansen, Electronics Letters 18(6), 1982 (constants from memory).
 struct Microstrip {
   double width_m = 0.0;
   double height_m = 0.0;
@@ -147,22 +159,5 @@ struct LineConstants {
 ///
 /// Errors: std::invalid_argument unless symbol_rate_bd > 0 and delay_s >= 0, finite.
 [[nodiscard]] Eigen::VectorXd modelled_frequencies_hz(double symbol_rate_bd, double delay_s);
-
-/// A line model found from a measurement.
-struct LineFit {
-  AnnexLine model;
-  double residual_db = 0.0;       ///< RMS of 20 log10 |s21| about the model's, up to top_hz
-  double residual_s21 = 0.0;      ///< RMS of |s21 - model|, up to top_hz
-  double residual_delay_s = 0.0;  ///< RMS of phase difference over 2 pi f, upper half of the band
-  double top_hz = 0.0;            ///< highest frequency that was used
-  double end_delay_s = 0.0;       ///< of the transition at each end (connector), with
-  double end_z_ohm = 0.0;         ///< its impedance; both 0 where none was fitted
-};
-
-/// Least-squares fit of the annex form to a two-port of known length.
-///
-/// Errors: an error note unless the network has two ports, at least 16 points and length_m > 0.
-[[nodiscard]] Result<LineFit> fit_line(const Network& measured, double length_m,
-                                       std::string_view label);
 
 }  // namespace tapwright
