@@ -79,7 +79,7 @@ Json json_object_of(const Figure& figure) {
     for (const Bars::Group& g : figure.bars->groups) {
       groups.push_back({{"name", g.name}, {"colour", g.colour}, {"from", list(g.from)}, {"to", list(g.to)}});
     }
-    out["bars"] = {{"names", figure.bars->names}, {"groups", groups}};
+    out["bars"] = {{"names", figure.bars->names}, {"groups", groups}, {"overlaid", figure.bars->overlaid}};
   }
   return out;
 }

@@ -200,7 +200,8 @@ std::string bars_svg(const Figure& figure) {
   }
   out += text_at((left + kWidth - kRight) / 2, kHeight - kBottom + 33, "middle", figure.x.label);
   const double pitch = (kHeight - kBottom - kTop) / std::max<double>(1.0, static_cast<double>(bars.names.size()));
-  const double thick = std::min(22.0, 0.8 * pitch / static_cast<double>(std::max<std::size_t>(1, bars.groups.size())));
+  const double beside = bars.overlaid ? 1.0 : static_cast<double>(std::max<std::size_t>(1, bars.groups.size()));
+  const double thick = std::min(22.0, 0.8 * pitch / beside);
   for (std::size_t i = 0; i < bars.names.size(); ++i) {
     const double middle = kTop + (static_cast<double>(i) + 0.5) * pitch;
     std::string name = bars.names[i];
@@ -212,7 +213,7 @@ std::string bars_svg(const Figure& figure) {
       if (!std::isfinite(group.to[at])) continue;
       const double from = x.at(group.from.size() > 0 ? group.from[at] : 0.0);
       const double to = x.at(group.to[at]);
-      const double y = middle + (static_cast<double>(g) - static_cast<double>(bars.groups.size()) / 2) * thick;
+      const double y = middle + ((bars.overlaid ? 0.0 : static_cast<double>(g)) - beside / 2) * thick;
       out += rectangle(std::min(from, to), y, std::max(1.0, std::abs(to - from)), thick - 1,
                        "fill=\"" + palette()[static_cast<std::size_t>(group.colour) % palette().size()] + "\"");
     }

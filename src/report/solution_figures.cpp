@@ -75,6 +75,8 @@ std::vector<Figure> eye_figures(const SolutionReport& report) {
   field.y_min = v_to_mv(centre(0));
   field.y_max = v_to_mv(centre(num_rows - 1));
   field.floor = std::log10(std::max(target.error_ratio, kLeastProbability)) - 1.0;
+  f.y.min = field.y_min;
+  f.y.max = field.y_max;
   f.field = std::move(field);
   const Eigen::VectorXd contour_v = eye.contour_v(target.error_ratio);
   Eigen::VectorXd upper = 1e3 * contour_v;
@@ -97,7 +99,7 @@ std::vector<Figure> eye_figures(const SolutionReport& report) {
 
   const auto clipped = [](Eigen::VectorXd p) {
     for (double& v : p) {
-      if (!(v >= kLeastProbability)) v = std::numeric_limits<double>::quiet_NaN();
+      v = std::max(v, 1e-3 * kLeastProbability);  // the axis ends before it
     }
     return p;
   };
@@ -234,6 +236,7 @@ Figure budget_figure(const SolutionReport& report) {
   bars.names.push_back("eye that is left");
   keep.to[static_cast<Eigen::Index>(n) - 1] = v_to_mv(level_v);
   bars.groups = {keep, lose};
+  bars.overlaid = true;
   f.bars = std::move(bars);
   f.summary = "From the " + mv(2.0 * s.signal_v) + " that the main cursor opens to the " + mv(level_v) +
               " that are left at the sampling instant in the worst case.";

@@ -59,6 +59,7 @@ struct Bars {
     int colour = 0;
   };
   std::vector<Group> groups;
+  bool overlaid = false;  ///< groups share one bar each, instead of standing beside each other
 };
 
 /// Either `series` (with guides, boxes, a field) or `bars`.

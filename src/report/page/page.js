@@ -121,7 +121,7 @@ function axisOptions(axis) {
   const options = {
     type: axis.logarithmic ? "logarithmic" : "linear",
     title: { display: true, text: axis.label, color: ink },
-    ticks: { color: ink, maxRotation: 0, callback: (value) => tickText(value, axis.logarithmic) },
+    ticks: { color: ink, maxRotation: 0, includeBounds: false, callback: (value) => tickText(value, axis.logarithmic) },
     grid: { color: rule, borderColor: ink },
   };
   if (axis.min !== null) options.min = axis.min;
@@ -182,6 +182,7 @@ function barChart(figure) {
     backgroundColor: seriesColour(group.colour),
     borderSkipped: false,
     maxBarThickness: 26,
+    grouped: !figure.bars.overlaid,
   }));
   const ink = themeColour("--ink");
   const shown = names.map((name) => (name.length > 40 ? name.slice(0, 38) + "\u2026" : name));
@@ -212,7 +213,7 @@ function drawFigure(figure) {
     normalized: true,
     color: ink,
     plugins: {
-      legend: { position: "bottom", labels: { color: ink, boxWidth: 26, boxHeight: 2 } },
+      legend: { position: "bottom", labels: { color: ink, boxWidth: 26, boxHeight: 2, filter: (item) => item.text !== "" } },
       tooltip: {
         callbacks: {
           label(item) {
