@@ -15,6 +15,7 @@ namespace {
 constexpr int kMaxPoints = 1 << 14;
 constexpr double kFineStepV = 10e-6;
 constexpr double kMaxBins = 65536.0;
+constexpr double kLeastExtraV = 5e-6;
 
 void require_tail(double probability) {
   if (!(probability > 0.0 && probability < 0.5)) {
@@ -25,29 +26,90 @@ void require_tail(double probability) {
 
 struct Located {
   TailContour contour;
-  double level_v = 0.0;
+  double contour_level_v = 0.0;  ///< N(P) of the sum that the contour belongs to
+  double level_v = 0.0;          ///< N(P) of the sum asked for
 };
 
-std::optional<Located> locate(const Cumulant& cumulant, double probability) {
+/// N(P) by the contour of `cumulant` itself; empty where it would need too many points.
+std::optional<Located> locate_directly(const Cumulant& cumulant, double probability) {
   if (!(cumulant.sigma_v() > 0.0)) return std::nullopt;
   std::optional<double> theta = cumulant.theta_of_quantile(gaussian_quantile_of_tail(probability));
   for (int attempt = 0; attempt < 3 && theta; ++attempt) {
     const Cumulant::At at = cumulant.at(*theta);
-    const auto contour = TailContour::along(
-        cumulant, *theta, TailContour::period_for(*theta, at, probability), kMaxPoints);
+    auto contour = TailContour::along(cumulant, *theta,
+                                      TailContour::period_for(*theta, at, probability), kMaxPoints);
     if (!contour) return std::nullopt;
     const double level_v = contour->level_of(probability, at.k1);
     // Far from the saddle the sum would cancel; then the line is laid anew through the level.
-    if (std::abs(level_v - at.k1) * *theta < 8.0) return Located{*contour, level_v};
+    if (std::abs(level_v - at.k1) * *theta < 8.0) {
+      return Located{std::move(*contour), level_v, level_v};
+    }
     theta = level_v > 0.0 ? cumulant.theta_of_level(level_v) : std::nullopt;
   }
   return std::nullopt;
 }
 
-/// A step that is fine but leaves a grid of a bearable size.
+/// The largest step of which all amplitudes are multiples, to a millionth of the largest; 0 when it
+/// is so small that it does not matter.
+double lattice_step_v(const std::vector<double>& amplitudes_v) {
+  double step = amplitudes_v.empty() ? 0.0 : amplitudes_v.front();
+  for (const double b : amplitudes_v) {
+    double larger = step;
+    double rest = b;
+    while (rest > 1e-6 * amplitudes_v.front()) {
+      const double next = std::abs(std::remainder(larger, rest));
+      larger = rest;
+      rest = next;
+      if (larger < kFineStepV) return 0.0;
+    }
+    step = std::min(step, larger);
+    if (step < kFineStepV) return 0.0;
+  }
+  return step;
+}
+
+/// N(P). The points of a contour grow as 1 / sigma, so little noise is met with a little more: N is
+/// taken at sigma^2 + v and sigma^2 + v/2 and carried on to v = 0. Where N turns out not to be
+/// linear in v (the derivative at v against the difference), or the amplitudes are multiples of a
+/// step that v would wash out, v is quartered.
+std::optional<Located> locate(const Cumulant& cumulant, double probability) {
+  constexpr double kPoints = 192.0;
+  const double sigma2 = cumulant.sigma_v() * cumulant.sigma_v();
+  const auto widened = [&](double extra_v2) {
+    return Cumulant(cumulant.amplitudes_v(), std::sqrt(sigma2 + extra_v2));
+  };
+  const double quantile = gaussian_quantile_of_tail(probability);
+  const double total_v = std::sqrt(cumulant.variance_v2());
+  // For the first guess theta = Q over the deviation: y_max / step = kPoints.
+  double extra_v = 6.5 * (std::log(1.0 / probability) + 14.0) * total_v /
+                   (quantile * 2.0 * std::numbers::pi * kPoints);
+  if (!(extra_v > 4.0 * cumulant.sigma_v())) return locate_directly(cumulant, probability);
+  const double lattice_v = lattice_step_v(cumulant.amplitudes_v());
+  for (; extra_v > 4.0 * cumulant.sigma_v() && extra_v > kLeastExtraV; extra_v *= 0.5) {
+    if (lattice_v < 4.0 * extra_v && lattice_v > 0.0) continue;
+    const double v = extra_v * extra_v;
+    const Cumulant wide = widened(v);
+    const auto at_v = locate_directly(wide, probability);
+    auto at_half = locate_directly(widened(0.5 * v), probability);
+    if (!at_v || !at_half) continue;
+    const double slope = at_v->contour.by_variance(at_v->level_v);
+    const double difference_v = at_v->level_v - at_half->level_v;
+    // What is left after carrying on is of the order of the bend, taken ten times for safety.
+    const double bend_v = std::abs(difference_v - 0.5 * v * slope);
+    if (10.0 * bend_v > 1e-7 + 1e-6 * at_half->level_v) continue;
+    at_half->level_v -= difference_v;
+    return at_half;
+  }
+  return locate_directly(cumulant, probability);
+}
+
+/// A step that is fine but leaves a grid of a bearable size; a fraction of the amplitudes' own step
+/// where they have one, for then nothing is split.
 double fallback_step(const Cumulant& cumulant) {
   const double range_v = 2.0 * (cumulant.worst_v() + 10.0 * cumulant.sigma_v());
-  return std::max(kFineStepV, range_v / kMaxBins);
+  const double step_v = std::max(kFineStepV, range_v / kMaxBins);
+  const double lattice_v = lattice_step_v(cumulant.amplitudes_v());
+  return lattice_v > step_v ? lattice_v / std::ceil(lattice_v / step_v) : step_v;
 }
 
 }  // namespace
@@ -112,6 +174,7 @@ double exceeded_level_v(const Disturbance& disturbance, double probability) {
   require_tail(probability);
   const Cumulant cumulant(disturbance);
   if (!(cumulant.variance_v2() > 0.0)) return 0.0;
+  if (cumulant.is_certain(probability)) return cumulant.worst_v();
   if (const auto located = locate(cumulant, probability)) return located->level_v;
   const double grid_v =
       grid_distribution(cumulant, fallback_step(cumulant)).exceeded_level_v(probability);
@@ -128,7 +191,8 @@ ExceededLevel exceeded_level_with_gradient(const Disturbance& disturbance, doubl
   double level_v = 0.0;
   if (const auto located = locate(cumulant, probability)) {
     level_v = located->level_v;
-    located->contour.gradient(level_v, amplitudes, disturbance.sigma_v, by_amplitude, by_sigma);
+    located->contour.gradient(located->contour_level_v, amplitudes, disturbance.sigma_v,
+                              by_amplitude, by_sigma);
   } else {
     level_v = exceeded_level_v(disturbance, probability);
     // Too little noise for the contour: the mean of each sign under the tilt that has its mean at

@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <cmath>
+#include <cstring>
 #include <functional>
 #include <limits>
 #include <numbers>
@@ -18,6 +19,91 @@ constexpr double kC6 = 1.0 / 45.0;
 constexpr double kC8 = -17.0 / 2520.0;
 constexpr double kC10 = 31.0 / 14175.0;
 constexpr double kNegligible = 1e-9;
+constexpr double kGone = 1e-12;     // a point of a contour, relative to its first
+constexpr std::size_t kBlock = 32;  // points handled together
+
+/// sigma^2 z^2 / 2 and sum ln cosh(z b) over the amplitudes from an index on, |z| b < kSmall.
+class Series {
+ public:
+  Series(const Cumulant& cumulant, std::size_t from)
+      : sums_(cumulant.power_sums(from)),
+        half_p2_(0.5 * (sums_.p2 + cumulant.sigma_v() * cumulant.sigma_v())) {}
+  [[nodiscard]] std::complex<double> at(std::complex<double> z) const {
+    const std::complex<double> z2 = z * z;
+    return z2 * (half_p2_ +
+                 z2 * (kC4 * sums_.p4 +
+                       z2 * (kC6 * sums_.p6 + z2 * (kC8 * sums_.p8 + z2 * (kC10 * sums_.p10)))));
+  }
+
+ private:
+  const Cumulant::PowerSums& sums_;
+  double half_p2_;
+};
+
+using Lanes = double __attribute__((vector_size(16)));
+
+/// cosh(z b) / cosh(theta b) = cos(y b) + i tanh(theta b) sin(y b) of one amplitude along a
+/// contour, two points at a time, the angle stepped by rotation within a block.
+struct Factor {
+  double tanh = 0.0;
+  double c1 = 0.0, s1 = 0.0;            // of one step
+  double c_block = 0.0, s_block = 0.0;  // of a whole block
+  double c = 1.0, s = 0.0;              // at the start of block `next`
+  std::size_t next = 0;
+  bool ready = false;
+
+  void multiply(double b, double theta, double h, std::size_t block, double* re, double* im) {
+    if (!ready) {
+      const double e = std::exp(-2.0 * theta * b);
+      tanh = (1.0 - e) / (1.0 + e);
+      c1 = std::cos(h * b);
+      s1 = std::sin(h * b);
+      c_block = c1;
+      s_block = s1;
+      for (std::size_t n = 1; n < kBlock; n *= 2) {
+        const double twice = 2.0 * c_block * s_block;
+        c_block = (c_block - s_block) * (c_block + s_block);
+        s_block = twice;
+      }
+      ready = true;
+    }
+    if (next != block) {  // left out of earlier blocks
+      const double angle = static_cast<double>(block * kBlock) * h * b;
+      c = std::cos(angle);
+      s = std::sin(angle);
+    }
+    const double c2 = (c1 - s1) * (c1 + s1);
+    const double s2 = 2.0 * c1 * s1;
+    Lanes cs = {c, c * c1 - s * s1};
+    Lanes sn = {s, s * c1 + c * s1};
+    for (std::size_t j = 0; j < kBlock; j += 2) {
+      Lanes x;
+      Lanes y;
+      std::memcpy(&x, re + j, sizeof x);
+      std::memcpy(&y, im + j, sizeof y);
+      const Lanes ts = tanh * sn;
+      const Lanes x_next = x * cs - y * ts;
+      const Lanes y_next = x * ts + y * cs;
+      std::memcpy(re + j, &x_next, sizeof x);
+      std::memcpy(im + j, &y_next, sizeof y);
+      const Lanes c_next = cs * c2 - sn * s2;
+      sn = sn * c2 + cs * s2;
+      cs = c_next;
+    }
+    const double c_next = c * c_block - s * s_block;
+    s = s * c_block + c * s_block;
+    c = c_next;
+    next = block + 1;
+  }
+};
+
+double largest_norm(const double* re, const double* im) {
+  double largest = 0.0;
+  for (std::size_t j = 0; j < kBlock; ++j) {
+    largest = std::max(largest, re[j] * re[j] + im[j] * im[j]);
+  }
+  return largest;
+}
 
 }  // namespace
 
@@ -52,7 +138,10 @@ Cumulant::Cumulant(std::vector<double> amplitudes_v, double sigma_v)
     : amplitudes_v_(std::move(amplitudes_v)), sigma_v_(sigma_v) {
   for (double& b : amplitudes_v_) b = std::abs(b);
   std::sort(amplitudes_v_.begin(), amplitudes_v_.end(), std::greater<>());
-  while (!amplitudes_v_.empty() && amplitudes_v_.back() == 0.0) amplitudes_v_.pop_back();
+  // What the transforms' rounding left of a zero is no amplitude.
+  while (!amplitudes_v_.empty() && amplitudes_v_.back() <= 1e-14 * amplitudes_v_.front()) {
+    amplitudes_v_.pop_back();
+  }
   power_sums_.resize(amplitudes_v_.size() + 1);
   for (std::size_t i = amplitudes_v_.size(); i-- > 0;) {
     const double b2 = amplitudes_v_[i] * amplitudes_v_[i];
@@ -168,59 +257,53 @@ std::optional<TailContour> TailContour::along(const Cumulant& cumulant, double t
   // Nothing but the Gaussian part is sure to have died away for good: equal amplitudes come back.
   const double y_max = std::sqrt(-2.0 * std::log(kNegligible) / sigma2);
   if (!(y_max / h < max_points)) return std::nullopt;
-  const auto n = static_cast<std::size_t>(y_max / h) + 2;
-  const std::size_t padded = n + n % 2;
-  contour.real_.assign(padded, 1.0);
-  contour.imag_.assign(padded, 0.0);
+  const std::size_t num_blocks = static_cast<std::size_t>(y_max / h) / kBlock + 1;
+  contour.real_.resize(num_blocks * kBlock);
+  contour.imag_.resize(num_blocks * kBlock);
   contour.k_ = cumulant.at(theta).k;
 
-  // Amplitudes that matter: prod of cosh(z b) / cosh(theta b) = cos(y b) + i tanh(theta b) sin(y
-  // b), two points at a time, the angle stepped by rotation.
-  using Lanes = double __attribute__((vector_size(16)));
-  const std::size_t num_large = cumulant.first_small(std::hypot(theta, y_max));
-  for (std::size_t i = 0; i < num_large; ++i) {
-    const double b = cumulant.amplitudes_v()[i];
-    const double t = std::tanh(theta * b);
-    const double c1 = std::cos(h * b);
-    const double s1 = std::sin(h * b);
-    const double c2 = c1 * c1 - s1 * s1;
-    const double s2 = 2.0 * c1 * s1;
-    Lanes c = {1.0, c1};
-    Lanes s = {0.0, s1};
-    for (std::size_t j = 0; j < padded; j += 2) {
-      Lanes re;
-      Lanes im;
-      __builtin_memcpy(&re, &contour.real_[j], sizeof re);
-      __builtin_memcpy(&im, &contour.imag_[j], sizeof im);
-      const Lanes ts = t * s;
-      const Lanes re_next = re * c - im * ts;
-      const Lanes im_next = re * ts + im * c;
-      __builtin_memcpy(&contour.real_[j], &re_next, sizeof re);
-      __builtin_memcpy(&contour.imag_[j], &im_next, sizeof im);
-      const Lanes c_next = c * c2 - s * s2;
-      s = s * c2 + c * s2;
-      c = c_next;
+  // Amplitudes with theta b > 1 stand nearly still along the line: they come last.
+  const std::vector<double>& b = cumulant.amplitudes_v();
+  const auto first_mobile = static_cast<std::size_t>(
+      std::lower_bound(b.begin(), b.end(), 1.0 / theta, std::greater<>()) - b.begin());
+  std::vector<Factor> factors(b.size());
+  for (std::size_t block = 0; block < num_blocks; ++block) {
+    double* const re = contour.real_.data() + block * kBlock;
+    double* const im = contour.imag_.data() + block * kBlock;
+    const double y_first = static_cast<double>(block * kBlock) * h;
+    // The Gaussian part and the small amplitudes through their power sums ...
+    const std::size_t num_large =
+        cumulant.first_small(std::hypot(theta, y_first + static_cast<double>(kBlock) * h));
+    const Series series(cumulant, num_large);
+    const double at_theta = series.at(theta).real();
+    for (std::size_t j = 0; j < kBlock; ++j) {
+      const std::complex<double> value =
+          std::exp(series.at({theta, y_first + static_cast<double>(j) * h}) - at_theta);
+      re[j] = value.real();
+      im[j] = value.imag();
+    }
+    // ... then one large one after the other, until nothing is left to be multiplied.
+    const auto multiply = [&](std::size_t i) {
+      factors[i].multiply(b[i], theta, h, block, re, im);
+      return i % 8 != 0 || largest_norm(re, im) > kGone * kGone;
+    };
+    bool alive = largest_norm(re, im) > kGone * kGone;
+    for (std::size_t i = std::min(first_mobile, num_large); alive && i < num_large; ++i) {
+      alive = multiply(i);
+    }
+    for (std::size_t i = std::min(first_mobile, num_large); alive && i-- > 0;) alive = multiply(i);
+    if (!alive) {
+      std::fill(re, re + kBlock, 0.0);
+      std::fill(im, im + kBlock, 0.0);
     }
   }
-  // The small ones through their power sums, with the Gaussian part.
-  const Cumulant::PowerSums& sums = cumulant.power_sums(num_large);
-  const double p2 = 0.5 * (sums.p2 + sigma2);
-  const auto series = [&](std::complex<double> z) {
-    const std::complex<double> z2 = z * z;
-    return z2 * (p2 + z2 * (kC4 * sums.p4 +
-                            z2 * (kC6 * sums.p6 + z2 * (kC8 * sums.p8 + z2 * (kC10 * sums.p10)))));
-  };
-  const double at_theta = series({theta, 0.0}).real();
-  for (std::size_t j = 0; j < padded; ++j) {
-    const std::complex<double> exponent = series({theta, static_cast<double>(j) * h});
-    const double scale = std::exp(exponent.real() - at_theta);
-    const double c = std::cos(exponent.imag());
-    const double s = std::sin(exponent.imag());
-    const double re = contour.real_[j];
-    const double im = contour.imag_[j];
-    contour.real_[j] = scale * (re * c - im * s);
-    contour.imag_[j] = scale * (re * s + im * c);
+  std::size_t num_alive = contour.real_.size();
+  while (num_alive > kBlock && contour.real_[num_alive - 1] == 0.0 &&
+         contour.imag_[num_alive - 1] == 0.0) {
+    num_alive -= kBlock;
   }
+  contour.real_.resize(num_alive);
+  contour.imag_.resize(num_alive);
   contour.real_[0] *= 0.5;  // the trapezoid rule's first point
   contour.imag_[0] *= 0.5;
   return contour;
@@ -271,6 +354,22 @@ double TailContour::level_of(double probability, double start_v) const {
     if (std::abs(step) < 1e-7 / theta_ || high - low < 1e-7 / theta_) break;
   }
   return x;
+}
+
+double TailContour::by_variance(double x) const {
+  // d/d sigma^2 of e^(K - z x) / z is z/2 times what the density has.
+  double density = 0.0;
+  double moment = 0.0;
+  for (std::size_t j = 0; j < real_.size(); ++j) {
+    const double y = static_cast<double>(j) * step_;
+    const double c = std::cos(y * x);
+    const double s = std::sin(y * x);
+    const double re = real_[j] * c + imag_[j] * s;
+    const double im = imag_[j] * c - real_[j] * s;
+    density += re;
+    moment += re * theta_ - im * y;
+  }
+  return 0.5 * moment / density;
 }
 
 void TailContour::gradient(double x, const std::vector<double>& amplitudes_v, double sigma_v,

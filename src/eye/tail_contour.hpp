@@ -2,6 +2,7 @@
 // The distribution of a sum of independent +-b_k and Gaussian noise, seen along a vertical line
 // Re z = theta: what N(P), exceedance and the whole eye are computed from.
 
+#include <cmath>
 #include <complex>
 #include <optional>
 #include <vector>
@@ -39,6 +40,12 @@ class Cumulant {
   [[nodiscard]] double sigma_v() const { return sigma_v_; }
   [[nodiscard]] double variance_v2() const { return power_sums_.front().p2 + sigma_v_ * sigma_v_; }
   [[nodiscard]] double worst_v() const { return worst_v_; }
+  /// Without noise every sequence is at least this likely, so nothing rarer than `probability` lies
+  /// below the worst case.
+  [[nodiscard]] bool is_certain(double probability) const {
+    return sigma_v_ == 0.0 && amplitudes_v_.size() < 1000 &&
+           std::ldexp(probability, static_cast<int>(amplitudes_v_.size())) <= 1.0;
+  }
 
   /// Sums of b^2, b^4 ... b^10 over the amplitudes from an index on.
   struct PowerSums {
@@ -70,6 +77,8 @@ class TailContour {
   [[nodiscard]] double density(double x) const;
   /// x with exceedance(x) = probability, from a start near it.
   [[nodiscard]] double level_of(double probability, double start_v) const;
+  /// dN / d sigma^2 at x = N.
+  [[nodiscard]] double by_variance(double x) const;
   /// E[b-sign of amplitude b | X = x] for each amplitude, and the derivative by sigma.
   void gradient(double x, const std::vector<double>& amplitudes_v, double sigma_v,
                 std::vector<double>& by_amplitude, double& by_sigma) const;

@@ -79,6 +79,26 @@ TEST(Distribution, FastAndGridStayTogetherOnRandomSums) {
   }
 }
 
+// With little or no noise the fast evaluation works on a slightly wider sum and carries the result
+// back; with amplitudes on a lattice that must not wash the steps out.
+TEST(Distribution, FastAndGridStayTogetherInLittleNoise) {
+  std::mt19937_64 random(61);
+  for (int trial = 0; trial < 36; ++trial) {
+    Disturbance d = random_disturbance(random, 30 + 4 * trial, 0.0);
+    d.levels = trial % 6 == 0 ? 4 : 2;
+    if (trial % 3 == 0) {
+      const double lattice_v = 3e-4 * (1 + trial % 7);
+      d.symbols_v = (d.symbols_v / lattice_v).array().round() * lattice_v;
+    }
+    const double sigmas_v[] = {0.0, 1e-6, 1e-5, 1e-4};
+    d.sigma_v = sigmas_v[trial % 4];
+    const double probability = std::pow(10.0, -3.0 - trial % 10);
+    const double grid_v = grid_distribution(d, 5e-6).exceeded_level_v(probability);
+    // Wanted: 0.1 % or 0.1 mV; here a tenth of it, or two steps of the grid.
+    EXPECT_NEAR(exceeded_level_v(d, probability), grid_v, std::max(1e-4 * grid_v, 1e-5)) << trial;
+  }
+}
+
 // checks.md row 6. 1e8 symbols, each with neighbours and noise of its own, so that the counts are
 // binomial: the interval is 4 standard deviations (a seed fixed once, a fault seen 1 in 15000).
 TEST(Distribution, AgreesWithACountOfSymbols) {
