@@ -150,6 +150,10 @@ std::optional<Eigen::VectorXd> to_codes(const FirLimits& limits, Eigen::VectorXd
   const double sum = taps.lpNorm<1>();
   if (!(sum > 0.0) || !std::isfinite(sum)) return std::nullopt;
   taps *= limits.peak_limit / sum;
+  return nearest_codes(limits, std::move(taps));
+}
+
+std::optional<Eigen::VectorXd> nearest_codes(const FirLimits& limits, Eigen::VectorXd taps) {
   const auto n = static_cast<Eigen::Index>(limits.taps.size());
   std::vector<int> code(limits.taps.size(), -1);
   const Eigen::VectorXd wanted = taps;

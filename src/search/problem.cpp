@@ -26,6 +26,7 @@ void Box::set_codes(const std::vector<Knob>& knobs, std::size_t knob, int first_
 double Box::num_settings(const std::vector<Knob>& knobs) const {
   double product = 1.0;
   for (std::size_t i = 0; i < knobs.size(); ++i) {
+    if (knobs[i].inner) continue;
     if (knobs[i].values.empty()) return -1.0;
     product *= last[i] - first[i] + 1;
   }

@@ -7,6 +7,8 @@
 #include <vector>
 
 #include "search/cutting_planes.hpp"
+#include "tapwright/equalizer/device.hpp"
+#include "tapwright/eye/placed_eye.hpp"
 
 namespace tapwright::search {
 
@@ -17,6 +19,7 @@ struct Knob {
   double lo = 0.0;
   double hi = 0.0;
   std::vector<double> values;  ///< ascending; empty = real
+  bool inner = false;  ///< real in the bound, but Problem::exact chooses it by itself
 };
 
 /// A range of every knob: indices into Knob::values where there are any, real limits else.
@@ -26,7 +29,7 @@ struct Box {
 
   [[nodiscard]] static Box whole(const std::vector<Knob>& knobs);
   void set_codes(const std::vector<Knob>& knobs, std::size_t knob, int first_code, int last_code);
-  /// Number of settings, or -1 when a knob is real.
+  /// Number of settings, inner knobs aside; -1 when one of the others is real.
   [[nodiscard]] double num_settings(const std::vector<Knob>& knobs) const;
 };
 
@@ -57,6 +60,20 @@ class Problem {
   virtual double signal(std::span<const double> x) = 0;
   /// Single settings are worth what the cuts say: no rounding of other knobs, no sampling rule.
   [[nodiscard]] virtual bool exact_is_concave() const { return true; }
+  /// exact() is the best that the inner knobs can do, so that a scored setting is closed.
+  [[nodiscard]] virtual bool exact_is_all() const { return true; }
+};
+
+/// A problem for each sampling instant of one swing and CTLE state. Keeps scratch space, so one a
+/// thread.
+class Cell : public Problem {
+ public:
+  virtual void move_to(Eigen::Index phase_samples) = 0;
+  [[nodiscard]] virtual Place place() const = 0;
+  /// The settings that x stands for.
+  [[nodiscard]] virtual Settings settings(std::span<const double> x) = 0;
+  /// No setting has a height above this; a few operations.
+  [[nodiscard]] virtual double quick_bound() const = 0;
 };
 
 /// Heights are compared in steps of 1e-12 V, so that rounding doesn't decide between equals.

@@ -179,7 +179,9 @@ namespace {
 class Tree {
  public:
   Tree(Problem& problem, const TreeLimits& limits)
-      : problem_(problem), limits_(limits), knobs_(problem.knobs()), relaxer_(problem) {}
+      : problem_(problem), limits_(limits), knobs_(problem.knobs()), relaxer_(problem) {
+    for (const Knob& knob : knobs_) can_scan_ = can_scan_ && !knob.inner;
+  }
 
   TreeResult run() {
     std::vector<double> start;
@@ -235,7 +237,8 @@ class Tree {
       }
       ++result_.num_nodes;
       const double settings = node.box.num_settings(knobs_);
-      if (settings > 0.0 && settings <= (problem_.exact_is_concave() ? kScanConcave : kScanRough)) {
+      if (can_scan_ && settings > 0.0 &&
+          settings <= (problem_.exact_is_concave() ? kScanConcave : kScanRough)) {
         scan(node.box);
         set_kind(node, TreeNode::Kind::kScored);
         continue;
@@ -277,7 +280,8 @@ class Tree {
   void offer_rounded(const Box& box, const std::vector<double>& x) {
     std::vector<double> rounded = x;
     for (std::size_t i = 0; i < x.size(); ++i) {
-      if (knobs_[i].values.empty()) return;  // real knobs: leaves do
+      if (knobs_[i].inner) continue;
+      if (knobs_[i].values.empty()) return;  // other real knobs: leaves do
       rounded[i] = knobs_[i].values[at(std::clamp(nearest_code(knobs_[i], x[i]), box.first[i],
                                                   box.last[i]))];
     }
@@ -298,6 +302,9 @@ class Tree {
     const bool no_real_knobs = node.box.num_settings(knobs_) > 0.0;
     if (no_real_knobs) {
       set_kind(node, TreeNode::Kind::kScored);
+      if (!problem_.exact_is_all() && relaxation.bound_v > result_.best.height_v()) {
+        result_.open_bound_v = std::max(result_.open_bound_v, relaxation.bound_v);
+      }
       return;
     }
     set_kind(node, TreeNode::Kind::kBound);
@@ -412,6 +419,7 @@ class Tree {
   Relaxer relaxer_;
   TreeResult result_;
   std::vector<Record> records_;
+  bool can_scan_ = true;  ///< the cuts say something about settings without inner knobs
   std::int64_t num_tie_nodes_ = 0;
   std::int64_t last_number_ = 0;
 };

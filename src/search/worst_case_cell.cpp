@@ -312,6 +312,12 @@ double WorstCaseCell::signal(std::span<const double> x) {
   return state_->eye_.amplitude_v * tap_product(row_, 0);
 }
 
+Place WorstCaseCell::place() const {
+  Place place = state_->eye_.place;
+  place.phase_samples = phase_samples_;
+  return place;
+}
+
 Settings WorstCaseCell::settings(std::span<const double> x) {
   state_->space_->expand(x, taps_);
   Settings settings;

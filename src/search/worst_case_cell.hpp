@@ -43,7 +43,6 @@ class WorstCaseState {
   WorstCaseState(const EyeModel& model, const FirSpace& space, const InputLimit* input,
                  std::shared_ptr<const StateRows> rows, std::size_t swing_index,
                  std::size_t ctle_index);
-  [[nodiscard]] const Place& place() const { return eye_.place; }
 
  private:
   friend class WorstCaseCell;
@@ -74,11 +73,11 @@ class WorstCaseState {
   SamplingRule rule_ = SamplingRule::kBest;
 };
 
-/// Moves over the sampling instants of one state. Keeps scratch space, so one a thread.
-class WorstCaseCell final : public Problem {
+class WorstCaseCell final : public Cell {
  public:
   explicit WorstCaseCell(const WorstCaseState& state);
-  void move_to(Eigen::Index phase_samples);
+  void move_to(Eigen::Index phase_samples) override;
+  [[nodiscard]] Place place() const override;
 
   [[nodiscard]] const std::vector<Knob>& knobs() const override { return state_->space_->knobs(); }
   [[nodiscard]] std::vector<Box> roots() const override {
@@ -97,10 +96,9 @@ class WorstCaseCell final : public Problem {
     return !state_->dfe_has_codes_ && state_->rule_ == SamplingRule::kBest;
   }
 
-  /// The settings that x stands for. The DFE is the nearest allowed to each cursor.
-  [[nodiscard]] Settings settings(std::span<const double> x);
-  /// No setting of the box has a height above this; a few operations.
-  [[nodiscard]] double quick_bound() const;
+  /// The DFE is the nearest allowed to each cursor.
+  [[nodiscard]] Settings settings(std::span<const double> x) override;
+  [[nodiscard]] double quick_bound() const override;
 
  private:
   /// Half eye at 1 V launch without crosstalk at taps_, and its slopes by all taps.

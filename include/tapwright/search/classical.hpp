@@ -48,6 +48,10 @@ struct LeastSquares {
 /// every limit. Empty if there are no such codes near.
 [[nodiscard]] std::optional<Eigen::VectorXd> to_codes(const FirLimits& limits, Eigen::VectorXd taps);
 
+/// The same without scaling.
+[[nodiscard]] std::optional<Eigen::VectorXd> nearest_codes(const FirLimits& limits,
+                                                           Eigen::VectorXd taps);
+
 /// No equalization, zero forcing and least mean-square error on this link, scored like any other
 /// setting: swing the largest that the receiver's input allows, CTLE state and sampling instant
 /// where the method's own measure is best, DFE the best for these.

@@ -1,11 +1,9 @@
-#include "search/worst_case_search.hpp"
+#include "search/cell_search.hpp"
 
 #include <algorithm>
 #include <cmath>
 #include <memory>
-#include <numeric>
 
-#include "search/worst_case_cell.hpp"
 
 namespace tapwright::search {
 namespace {
@@ -66,22 +64,23 @@ class GlobalBest {
 
 class Search {
  public:
-  Search(const EyeModel& model, const SearchOptions& options, const RunControl& control)
+  Search(const EyeModel& model, const CellSource& source, const SearchOptions& options,
+         const RunControl& control)
       : model_(model),
+        source_(source),
         options_(options),
         control_(control),
-        space_(model.link.device.transmitter.fir, options.fir),
+        space_(*source.space),
         phases_(search_phases(model)) {
     if (options.max_seconds) {
       deadline_ = std::chrono::steady_clock::now() +
                   std::chrono::duration_cast<std::chrono::steady_clock::duration>(
                       std::chrono::duration<double>(*options.max_seconds));
     }
-    build_states();
   }
 
   SearchResult run() {
-    closed_.resize(states_.size());
+    closed_.resize(source_.num_states);
     seed();
     step("relaxation, rounded", std::numeric_limits<double>::infinity());
     scan_all();
@@ -92,49 +91,25 @@ class Search {
     result_.height_v = best_.height_v();
     result_.bound_v = std::max(best_.height_v(), open_bound_v_);
     result_.proven = open_bound_v_ == kImpossible;
-    result_.num_cells = static_cast<std::int64_t>(states_.size() * phases_.size());
+    result_.num_cells = static_cast<std::int64_t>(source_.num_states * phases_.size());
     step("branch and bound", result_.bound_v);
     collect();
     return std::move(result_);
   }
 
  private:
-  void build_states() {
-    const Device& device = model_.link.device;
-    const auto range = [](std::size_t count, std::optional<std::size_t> one) {
-      std::vector<std::size_t> indices(count);
-      std::iota(indices.begin(), indices.end(), std::size_t{0});
-      return one ? std::vector<std::size_t>{*one} : indices;
-    };
-    if (device.receiver.peak_input_v) {
-      input_ = std::make_unique<InputLimit>(device.transmitter.fir, model_.input);
-    }
-    const std::vector<std::size_t> ctle = range(model_.states.size(), options_.ctle_index);
-    const std::vector<std::size_t> swings =
-        range(device.transmitter.swings.size(), options_.swing_index);
-    states_.resize(swings.size() * ctle.size());
-    parallel_for(static_cast<int>(ctle.size()), control_.num_threads, [&](int i) {
-      const auto c = static_cast<std::size_t>(i);
-      const auto rows = std::make_shared<const StateRows>(model_.states[ctle[c]].victim);
-      for (std::size_t s = 0; s < swings.size(); ++s) {
-        states_[s * ctle.size() + c] = std::make_unique<WorstCaseState>(
-            model_, space_, input_.get(), rows, swings[s], ctle[c]);
-      }
-    });
-  }
-
   [[nodiscard]] bool out_of_time() const {
     return control_.stopped() || (deadline_ && std::chrono::steady_clock::now() > *deadline_);
   }
 
   [[nodiscard]] std::vector<double> middle() const {
     std::vector<double> x;
-    for (const Knob& knob : space_.knobs()) x.push_back(0.5 * (knob.lo + knob.hi));
+    for (const Knob& knob : source_.make(0)->knobs()) x.push_back(0.5 * (knob.lo + knob.hi));
     return x;
   }
 
   /// The relaxation over all roots of the cell's present place; x of the best root.
-  double relax_roots(WorstCaseCell& cell, Relaxer& relaxer, double stop_below_v,
+  double relax_roots(Cell& cell, Relaxer& relaxer, double stop_below_v,
                      std::vector<double>& x, std::vector<std::vector<TreeNode>>* trees) {
     double bound_v = kImpossible;
     std::vector<double> best_x;
@@ -158,36 +133,36 @@ class Search {
   /// A first good setting: the states whose relaxation at the pulse's peak is best, over all
   /// phases, rounded and moved.
   void seed() {
-    std::vector<OpenCell> starts(states_.size());
-    parallel_for(static_cast<int>(states_.size()), control_.num_threads, [&](int i) {
+    std::vector<OpenCell> starts(source_.num_states);
+    parallel_for(static_cast<int>(source_.num_states), control_.num_threads, [&](int i) {
       const auto s = static_cast<std::size_t>(i);
-      WorstCaseCell cell(*states_[s]);
-      Relaxer relaxer(cell);
-      cell.move_to(0);
+      const std::unique_ptr<Cell> cell = source_.make(s);
+      Relaxer relaxer(*cell);
+      cell->move_to(0);
       starts[s] = {s, 0, 0.0, middle()};
-      starts[s].bound_v = relax_roots(cell, relaxer, kImpossible, starts[s].x, nullptr);
+      starts[s].bound_v = relax_roots(*cell, relaxer, kImpossible, starts[s].x, nullptr);
     });
     by_bound(starts);
     for (std::size_t i = 0; i < std::min<std::size_t>(kNumSeedStates, starts.size()); ++i) {
-      WorstCaseCell cell(*states_[starts[i].state]);
-      Relaxer relaxer(cell);
+      const std::unique_ptr<Cell> cell = source_.make(starts[i].state);
+      Relaxer relaxer(*cell);
       std::vector<OpenCell> cells;
       std::vector<double> x = starts[i].x;
       for (const Eigen::Index phase : phases_) {
-        cell.move_to(phase);
-        if (cell.quick_bound() < best_.height_v()) continue;
-        const double bound_v = relax_roots(cell, relaxer, best_.height_v(), x, nullptr);
+        cell->move_to(phase);
+        if (cell->quick_bound() < best_.height_v()) continue;
+        const double bound_v = relax_roots(*cell, relaxer, best_.height_v(), x, nullptr);
         if (bound_v > best_.height_v()) cells.push_back({starts[i].state, phase, bound_v, x});
       }
       by_bound(cells);
       cells.resize(std::min<std::size_t>(cells.size(), kNumSeedPhases));
       for (const OpenCell& open : cells) {
-        cell.move_to(open.phase_samples);
+        cell->move_to(open.phase_samples);
         Best best;
         if (has_codes()) {
-          round_and_move(cell, open.x, best, result_.num_settings);
+          round_and_move(*cell, open.x, best, result_.num_settings);
         } else {
-          best.offer(cell.exact(open.x, kImpossible), cell.signal(open.x), open.x);
+          best.offer(cell->exact(open.x, kImpossible), cell->signal(open.x), open.x);
         }
         best_.offer(open.state, open.phase_samples, best);
       }
@@ -195,31 +170,31 @@ class Search {
   }
 
   void scan_all() {
-    std::vector<std::vector<OpenCell>> open_of(states_.size());
-    std::vector<std::int64_t> nodes_of(states_.size(), 0);
+    std::vector<std::vector<OpenCell>> open_of(source_.num_states);
+    std::vector<std::int64_t> nodes_of(source_.num_states, 0);
     const double incumbent_v = best_.height_v();
-    parallel_for(static_cast<int>(states_.size()), control_.num_threads, [&](int i) {
+    parallel_for(static_cast<int>(source_.num_states), control_.num_threads, [&](int i) {
       const auto s = static_cast<std::size_t>(i);
-      WorstCaseCell cell(*states_[s]);
-      Relaxer relaxer(cell);
+      const std::unique_ptr<Cell> cell = source_.make(s);
+      Relaxer relaxer(*cell);
       std::vector<double> x = middle();
       for (const Eigen::Index phase : phases_) {
         if (out_of_time()) {  // no bound: the cell stays open with all that it could be
           open_of[s].push_back({s, phase, std::numeric_limits<double>::infinity(), x});
           continue;
         }
-        cell.move_to(phase);
+        cell->move_to(phase);
         std::vector<std::vector<TreeNode>> trees;
-        const double quick_v = cell.quick_bound();
+        const double quick_v = cell->quick_bound();
         if (quick_v < incumbent_v - kTie) {
           if (options_.certificate) {
-            for (std::size_t r = 0; r < cell.roots().size(); ++r) trees.push_back({TreeNode{}});
+            for (std::size_t r = 0; r < cell->roots().size(); ++r) trees.push_back({TreeNode{}});
             closed_[s].push_back({phase, std::move(trees)});
           }
           continue;
         }
         ++nodes_of[s];
-        const double bound_v = relax_roots(cell, relaxer, incumbent_v - kTie, x,
+        const double bound_v = relax_roots(*cell, relaxer, incumbent_v - kTie, x,
                                            options_.certificate ? &trees : nullptr);
         if (bound_v >= incumbent_v - kTie) {
           open_of[s].push_back({s, phase, bound_v, x});
@@ -227,9 +202,9 @@ class Search {
           closed_[s].push_back({phase, std::move(trees)});
         }
       }
-      control_.report(static_cast<double>(i) / static_cast<double>(states_.size()), "bounding");
+      control_.report(static_cast<double>(i) / static_cast<double>(source_.num_states), "bounding");
     });
-    for (std::size_t s = 0; s < states_.size(); ++s) {
+    for (std::size_t s = 0; s < source_.num_states; ++s) {
       result_.num_nodes += nodes_of[s];
       for (OpenCell& cell : open_of[s]) open_.push_back(std::move(cell));
     }
@@ -242,17 +217,18 @@ class Search {
       const std::size_t count = std::min<std::size_t>(kBatch, open_.size() - from);
       std::vector<TreeResult> results(count);
       const double incumbent_v = best_.height_v();
-      const std::int64_t nodes_left = std::max<std::int64_t>(0, options_.max_nodes - result_.num_nodes);
+      const std::int64_t nodes_left = std::max<std::int64_t>(0, source_.max_nodes - num_tree_nodes_);
       parallel_for(static_cast<int>(count), control_.num_threads, [&](int i) {
         const OpenCell& open = open_[from + static_cast<std::size_t>(i)];
-        WorstCaseCell cell(*states_[open.state]);
-        cell.move_to(open.phase_samples);
+        const std::unique_ptr<Cell> cell = source_.make(open.state);
+        cell->move_to(open.phase_samples);
         TreeLimits limits{incumbent_v, nodes_left, options_.certificate, &control_, deadline_};
-        results[static_cast<std::size_t>(i)] = branch_and_bound(cell, limits);
+        results[static_cast<std::size_t>(i)] = branch_and_bound(*cell, limits);
       });
       for (std::size_t i = 0; i < count; ++i) {
         const OpenCell& open = open_[from + i];
         TreeResult& tree = results[i];
+        num_tree_nodes_ += tree.num_nodes;
         result_.num_nodes += tree.num_nodes;
         result_.num_settings += tree.num_settings;
         best_.offer(open.state, open.phase_samples, tree.best);
@@ -268,7 +244,8 @@ class Search {
   }
 
   [[nodiscard]] bool has_codes() const {
-    return std::any_of(space_.knobs().begin(), space_.knobs().end(),
+    const std::unique_ptr<Cell> cell = source_.make(0);
+    return std::any_of(cell->knobs().begin(), cell->knobs().end(),
                        [](const Knob& knob) { return !knob.values.empty(); });
   }
 
@@ -284,9 +261,9 @@ class Search {
 
   void collect() {
     for (const Placed& placed : best_.places()) {
-      WorstCaseCell cell(*states_[placed.state]);
-      cell.move_to(placed.phase_samples);
-      result_.ties.push_back(cell.settings(placed.found.x));
+      const std::unique_ptr<Cell> cell = source_.make(placed.state);
+      cell->move_to(placed.phase_samples);
+      result_.ties.push_back(cell->settings(placed.found.x));
     }
     if (options_.certificate && result_.proven) result_.certificate = certificate();
   }
@@ -346,9 +323,9 @@ class Search {
     Certificate proof;
     proof.bound_v = result_.bound_v;
     const std::vector<int> straddling = space_.straddling(space_.knobs());
-    for (std::size_t s = 0; s < states_.size(); ++s) {
+    for (std::size_t s = 0; s < source_.num_states; ++s) {
       for (const ClosedCell& closed : closed_[s]) {
-        const Place& place = states_[s]->place();
+        const Place place = source_.make(s)->place();
         Certificate::Cell cell{place.swing_index, place.ctle_index, closed.phase_samples, {}};
         auto tree = closed.trees.begin();
         add_trees(straddling, 0, tree, proof, cell);
@@ -359,25 +336,25 @@ class Search {
   }
 
   const EyeModel& model_;
+  const CellSource& source_;
   const SearchOptions& options_;
   const RunControl& control_;
-  FirSpace space_;
+  const FirSpace& space_;
   std::vector<Eigen::Index> phases_;
   std::optional<std::chrono::steady_clock::time_point> deadline_;
-  std::unique_ptr<InputLimit> input_;
-  std::vector<std::unique_ptr<WorstCaseState>> states_;
   std::vector<OpenCell> open_;
   std::vector<std::vector<ClosedCell>> closed_;
   GlobalBest best_;
   double open_bound_v_ = kImpossible;
+  std::int64_t num_tree_nodes_ = 0;
   SearchResult result_;
 };
 
 }  // namespace
 
-SearchResult worst_case_search(const EyeModel& model, const SearchOptions& options,
-                               const RunControl& control) {
-  return Search(model, options, control).run();
+SearchResult cell_search(const EyeModel& model, const CellSource& source,
+                         const SearchOptions& options, const RunControl& control) {
+  return Search(model, source, options, control).run();
 }
 
 }  // namespace tapwright::search
