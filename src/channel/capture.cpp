@@ -411,7 +411,7 @@ Result<Capture> parse_capture(std::string_view text, std::string_view file_name,
         least_step = std::min(least_step, step);
       }
       last_s = t;
-      if (n % 1024 == 0) milestones.emplace_back(n, t);
+      if (n < 1024 || n % 1024 == 0) milestones.emplace_back(n, t);
     }
     ++n;
   }

@@ -108,6 +108,21 @@ TEST(Capture, BringsUnevenTimesToAnEvenGrid) {
   EXPECT_NEAR(static_cast<double>(c.samples_v.size() - 1) * c.dt_s, 6.0, 1e-14);
 }
 
+TEST(Capture, SeesAFewShortStepsAtTheStartOfASimulation) {
+  // As circuit simulators begin: the mean step is then not the usual one.
+  std::string text = "0 0\n1e-13 0.01\n3e-13 0.03\n7e-13 0.07\n";
+  for (int i = 1; i <= 300; ++i) {
+    text += std::to_string(i) + "e-12 " + std::to_string(0.1 * i) + "\n";
+  }
+  const Result<Capture> result = parse_capture(text, "sim.txt");
+  ASSERT_TRUE(result);
+  EXPECT_EQ(result.notes.size(), 1u);
+  const Capture& c = *result.value;
+  for (Eigen::Index i = 0; i < c.samples_v.size(); ++i) {  // a straight line stays one: rounding
+    EXPECT_NEAR(c.samples_v[i], static_cast<double>(i) * c.dt_s * 1e11, 1e-12);
+  }
+}
+
 TEST(Capture, RefusesAColumnWithoutNumbers) {
   CaptureFormat format;
   format.value_column = 3;
