@@ -4,6 +4,8 @@
 #include <cmath>
 #include <memory>
 
+#include "search/worst_case_cell.hpp"
+
 
 namespace tapwright::search {
 namespace {
@@ -12,15 +14,6 @@ constexpr double kTie = 1e-12;        // volts: the step of height_key
 constexpr int kNumSeedStates = 3;     // states searched for a first good setting
 constexpr int kNumSeedPhases = 4;
 constexpr int kBatch = 16;            // open cells that share one incumbent: no matter how many threads
-
-/// A sampling rule may lead farther from the peak than anyone would go for the best.
-std::vector<Eigen::Index> search_phases(const EyeModel& model) {
-  if (model.link.sampling == SamplingRule::kBest) return candidate_phases(model);
-  const Eigen::Index reach = 3 * model.input.samples_per_ui();
-  std::vector<Eigen::Index> phases;
-  for (Eigen::Index phase = -reach; phase <= reach; ++phase) phases.push_back(phase);
-  return phases;
-}
 
 /// A cell that its root relaxation left open.
 struct OpenCell {

@@ -174,6 +174,44 @@ Multipliers Relaxer::contradiction() const {
 
 // --- the tree ------------------------------------------------------------------------------------
 
+Split choose_split(const std::vector<Knob>& knobs, const Box& box, std::span<const double> x) {
+  Split split;
+  double most = 1e-9;
+  int widest = 0;
+  Split on_codes;
+  for (int i = 0; i < static_cast<int>(knobs.size()); ++i) {
+    const Knob& knob = knobs[at(i)];
+    if (knob.values.empty() || box.first[at(i)] == box.last[at(i)]) continue;
+    const auto begin = knob.values.begin() + box.first[at(i)];
+    const auto end = knob.values.begin() + box.last[at(i)] + 1;
+    const auto above = std::upper_bound(begin + 1, end - 1, x[at(i)]);
+    const double share = std::clamp((x[at(i)] - above[-1]) / (*above - above[-1]), 0.0, 1.0);
+    const int upper = static_cast<int>(above - knob.values.begin());
+    const double fraction = std::min(share, 1.0 - share);
+    if (fraction > most) {
+      most = fraction;
+      split = {i, upper};
+    }
+    const int width = box.last[at(i)] - box.first[at(i)];
+    if (width > widest) {
+      widest = width;
+      on_codes = {i, upper};
+    }
+  }
+  return split.knob >= 0 ? split : on_codes;
+}
+
+std::vector<double> rounded(const std::vector<Knob>& knobs, const Box& box,
+                            std::span<const double> x) {
+  std::vector<double> out(x.begin(), x.end());
+  for (std::size_t i = 0; i < out.size(); ++i) {
+    if (knobs[i].values.empty()) continue;
+    out[i] = knobs[i].values[at(
+        std::clamp(nearest_code(knobs[i], x[i]), box.first[i], box.last[i]))];
+  }
+  return out;
+}
+
 namespace {
 
 class Tree {
@@ -260,7 +298,7 @@ class Tree {
       }
       const double best = std::max(limits_.incumbent_v, result_.best.height_v());
       if (relaxation.bound_v <= best + kTie && relaxation.bound_v >= best - kTie) ++num_tie_nodes_;
-      const Split split = choose_split(node.box, start);
+      const Split split = choose_split(knobs_, node.box, start);
       if (split.knob < 0) {
         finish_leaf(node, relaxation, start);
         continue;
@@ -278,17 +316,14 @@ class Tree {
   }
 
   void offer_rounded(const Box& box, const std::vector<double>& x) {
-    std::vector<double> rounded = x;
-    for (std::size_t i = 0; i < x.size(); ++i) {
-      if (knobs_[i].inner) continue;
-      if (knobs_[i].values.empty()) return;  // other real knobs: leaves do
-      rounded[i] = knobs_[i].values[at(std::clamp(nearest_code(knobs_[i], x[i]), box.first[i],
-                                                  box.last[i]))];
+    for (const Knob& knob : knobs_) {
+      if (knob.values.empty() && !knob.inner) return;  // leaves know the best real value
     }
+    const std::vector<double> trial = rounded(knobs_, box, x);
     ++result_.num_settings;
     const double worth = std::max(limits_.incumbent_v, result_.best.height_v()) - kTie;
-    const double height = problem_.exact(rounded, worth);
-    if (height >= worth) result_.best.offer(height, problem_.signal(rounded), rounded);
+    const double height = problem_.exact(trial, worth);
+    if (height >= worth) result_.best.offer(height, problem_.signal(trial), trial);
   }
 
   /// Every coded knob stands at one code: the relaxation is over real knobs alone, or over none.
@@ -334,39 +369,6 @@ class Tree {
       }
       if (i == code.size()) return;
     }
-  }
-
-  struct Split {
-    int knob = -1;
-    int at = 0;
-  };
-
-  /// The knob farthest from its codes; where all stand on codes, the one with most of them.
-  [[nodiscard]] Split choose_split(const Box& box, const std::vector<double>& x) const {
-    Split split;
-    double most = 1e-9;
-    int widest = 0;
-    Split on_codes;
-    for (int i = 0; i < static_cast<int>(knobs_.size()); ++i) {
-      const Knob& knob = knobs_[at(i)];
-      if (knob.values.empty() || box.first[at(i)] == box.last[at(i)]) continue;
-      const auto begin = knob.values.begin() + box.first[at(i)];
-      const auto end = knob.values.begin() + box.last[at(i)] + 1;
-      const auto above = std::upper_bound(begin + 1, end - 1, x[at(i)]);
-      const double share = std::clamp((x[at(i)] - above[-1]) / (*above - above[-1]), 0.0, 1.0);
-      const int upper = static_cast<int>(above - knob.values.begin());
-      const double fraction = std::min(share, 1.0 - share);
-      if (fraction > most) {
-        most = fraction;
-        split = {i, upper};
-      }
-      const int width = box.last[at(i)] - box.first[at(i)];
-      if (width > widest) {
-        widest = width;
-        on_codes = {i, upper};
-      }
-    }
-    return split.knob >= 0 ? split : on_codes;
   }
 
   void branch(std::priority_queue<Node, std::vector<Node>, Later>& open, const Node& node,

@@ -85,6 +85,18 @@ class Relaxer {
   std::int64_t num_cuts_ = 0;
 };
 
+/// Where a box is cut in two: the knob farthest from its codes; where all stand on codes, the one
+/// with most of them. knob is -1 when every coded knob has one code left.
+struct Split {
+  int knob = -1;
+  int at = 0;  ///< first code of the upper half
+};
+[[nodiscard]] Split choose_split(const std::vector<Knob>& knobs, const Box& box,
+                                 std::span<const double> x);
+/// Coded knobs at the nearest code of the box, real ones as in x.
+[[nodiscard]] std::vector<double> rounded(const std::vector<Knob>& knobs, const Box& box,
+                                          std::span<const double> x);
+
 struct TreeLimits {
   double incumbent_v = kImpossible;  ///< boxes below it are closed
   std::int64_t max_nodes = 0;

@@ -24,6 +24,15 @@ double dot(std::span<const double> a, std::span<const double> b) {
 
 }  // namespace
 
+std::vector<Eigen::Index> search_phases(const EyeModel& model) {
+  if (model.link.sampling == SamplingRule::kBest) return candidate_phases(model);
+  // A rule may lead farther from the peak than anyone would go for the best.
+  const Eigen::Index reach = 3 * model.input.samples_per_ui();
+  std::vector<Eigen::Index> phases;
+  for (Eigen::Index phase = -reach; phase <= reach; ++phase) phases.push_back(phase);
+  return phases;
+}
+
 StateRows::StateRows(const PulseResponse& pulse)
     : per_ui_(pulse.samples_per_ui()),
       per_phase_((pulse.size() + per_ui_ - 1) / per_ui_),

@@ -19,6 +19,9 @@
 
 namespace tapwright::search {
 
+/// The sampling instants of a search: the candidates, or all that a sampling rule may lead to.
+[[nodiscard]] std::vector<Eigen::Index> search_phases(const EyeModel& model);
+
 /// The pulse of one CTLE state sorted by phase: UI-spaced samples lie side by side.
 class StateRows {
  public:

@@ -42,7 +42,12 @@ struct JointSolution {
   std::vector<TrailStep> trail;
 };
 
-/// Errors: std::invalid_argument if `models` is empty or the devices or objectives differ.
+/// Proven for the worst case of independent symbols at one phase; for other objectives the codes are
+/// searched around the best of that case and nothing is claimed. `max_nodes` counts per CTLE state
+/// and swing.
+///
+/// Errors: std::invalid_argument if `models` is empty, if the devices differ in their swings, FIR or
+///         number of CTLE states, or the objectives differ.
 [[nodiscard]] JointSolution solve_together(const std::vector<EyeModel>& models,
                                            const SearchOptions& options = {},
                                            const RunControl& control = {});
