@@ -75,21 +75,45 @@ Quiet quiet_part(const Eigen::VectorXd& samples_v, int samples_per_ui, double gu
   return {std::sqrt((samples_v.head(length).array() - mean_v).square().mean()), mean_v};
 }
 
+Complex launch_at(const LaunchShape& launch, double f_hz) {
+  Complex value = 1.0;
+  if (launch.rise_time_s) {
+    const double x = pi * f_hz * *launch.rise_time_s / 1.6832;
+    value *= std::exp(-2 * x * x);
+  }
+  if (launch.high_pass_hz) {
+    const Complex x(0.0, f_hz / *launch.high_pass_hz);
+    value *= x / (1.0 + x);
+  }
+  return value;
+}
+
+/// Nepers per hertz that the magnitude falls from the middle of the band to its top; 0 if it rises.
+double fall_towards_top(const FrequencyResponse& response) {
+  const Eigen::VectorXd& f = response.frequencies_hz;
+  const Eigen::Index n = f.size();
+  const Eigen::Index count = std::max<Eigen::Index>(1, n / 20);
+  const Eigen::Index middle = std::lower_bound(f.data(), f.data() + n, 0.5 * f[n - 1]) - f.data();
+  const Eigen::Index from = std::clamp<Eigen::Index>(middle - count / 2, 0, n - count);
+  const double low = response.values.segment(from, count).cwiseAbs().mean();
+  const double high = response.values.tail(count).cwiseAbs().mean();
+  const double span_hz = f[n - count] - f[from];
+  return low > high && high > 0 && span_hz > 0 ? std::log(low / high) / span_hz : 0.0;
+}
+
+/// The least divisor of samples_per_ui whose half reaches `top`, in symbol rates.
+int coarse_samples_per_ui(int samples_per_ui, double top) {
+  for (int divisor = 1; divisor < samples_per_ui; ++divisor) {
+    if (samples_per_ui % divisor == 0 && divisor > 2 * top) return divisor;
+  }
+  return samples_per_ui;
+}
+
 }  // namespace
 
 Eigen::VectorXcd launch_response(const LaunchShape& launch, const Eigen::VectorXd& frequencies_hz) {
-  Eigen::VectorXcd values = Eigen::VectorXcd::Ones(frequencies_hz.size());
-  for (Eigen::Index k = 0; k < values.size(); ++k) {
-    const double f = frequencies_hz[k];
-    if (launch.rise_time_s) {
-      const double x = pi * f * *launch.rise_time_s / 1.6832;
-      values[k] *= std::exp(-2 * x * x);
-    }
-    if (launch.high_pass_hz) {
-      const Complex x(0.0, f / *launch.high_pass_hz);
-      values[k] *= x / (1.0 + x);
-    }
-  }
+  Eigen::VectorXcd values(frequencies_hz.size());
+  for (Eigen::Index k = 0; k < values.size(); ++k) values[k] = launch_at(launch, frequencies_hz[k]);
   return values;
 }
 
@@ -164,75 +188,87 @@ Result<ReceivedSpectrum> received_spectrum(const FrequencyResponse& response, co
           .cwiseMin(top_hz);
   const Result<Eigen::VectorXcd> inside = interpolate(response, inside_hz, label);
   out.values = Eigen::VectorXcd::Zero(num_bins);
-  out.values.head(num_inside) = *inside.value;
 
   // Above the data: the last value with the bulk delay under the taper; and, only to estimate what
   // is missing, the loss of the upper half of the band carried on.
   const Complex last = response.values[n - 1] * std::polar(1.0, 2 * pi * top_hz * delay_s);
-  double fall_per_hz = 0.0;
-  {
-    const Eigen::Index middle = std::lower_bound(f.data(), f.data() + n, 0.5 * top_hz) - f.data();
-    const Eigen::Index tenth = std::max<Eigen::Index>(1, n / 20);
-    const auto mean = [&](Eigen::Index from, Eigen::Index count) {
-      return response.values.segment(from, count).cwiseAbs().mean();
-    };
-    const Eigen::Index from = std::clamp<Eigen::Index>(middle - tenth / 2, 0, n - tenth);
-    const double low = mean(from, tenth), high = mean(n - tenth, tenth);
-    const double span_hz = f[n - tenth] - f[from];
-    if (low > high && high > 0 && span_hz > 0) fall_per_hz = std::log(low / high) / span_hz;
-  }
-  Eigen::VectorXcd missing = Eigen::VectorXcd::Zero(num_bins);
-  for (Eigen::Index k = 0; k < num_bins; ++k) {
-    const double x_hz = static_cast<double>(k) * df;
-    if (x_hz <= cut_hz) continue;
-    const double share = (x_hz - cut_hz) / (kTaperShare * cut_hz);
-    const double taper = share < 1 ? 0.5 * (1 + std::cos(pi * share)) : 0.0;
-    Complex value = out.values[k];
-    if (k >= num_inside) {
-      value = last * std::polar(1.0, -2 * pi * x_hz * delay_s);
-      missing[k] = value * (std::exp(-fall_per_hz * (x_hz - top_hz)) - taper);
-    } else {
-      missing[k] = value * (1 - taper);
-    }
-    out.values[k] = value * taper;
-  }
-
+  const double fall_per_hz = fall_towards_top(response);
+  const auto taper = [&](double f_hz) {
+    const double share = (f_hz - cut_hz) / (kTaperShare * cut_hz);
+    return share <= 0 ? 1.0 : share < 1 ? 0.5 * (1 + std::cos(pi * share)) : 0.0;
+  };
   // Launch: flat pulse of one UI, edge filter, AC coupling; in DFT coefficients (divided by dt).
-  const Eigen::VectorXd all_hz =
-      Eigen::VectorXd::LinSpaced(num_bins, 0.0, static_cast<double>(num_bins - 1) * df);
-  const Eigen::VectorXcd shape = launch_response(launch, all_hz);
-  double energy_kept = 0.0, energy_missing = 0.0;
-  for (Eigen::Index k = 0; k < num_bins; ++k) {
-    const Complex pulse = m * sinc(all_hz[k] * grid.ui_s) *
-                          std::polar(1.0, -pi * all_hz[k] * (grid.ui_s - 2 * out.start_s)) *
-                          shape[k];
-    out.values[k] *= pulse;
-    missing[k] *= pulse;
-    energy_kept += std::norm(out.values[k]);
-    energy_missing += std::norm(missing[k]);
+  const auto pulse_at = [&](double f_hz) {
+    const double phase = -pi * f_hz * (grid.ui_s - 2 * out.start_s);
+    return m * sinc(f_hz * grid.ui_s) * std::polar(1.0, phase) * launch_at(launch, f_hz);
+  };
+  const Eigen::Index num_kept = std::min(
+      num_bins, static_cast<Eigen::Index>(std::floor((1 + kTaperShare) * cut_hz / df)) + 1);
+  for (Eigen::Index k = 0; k < num_kept; ++k) {
+    const double f_hz = static_cast<double>(k) * df;
+    const Complex value =
+        k < num_inside ? (*inside.value)[k] : last * std::polar(1.0, -2 * pi * f_hz * delay_s);
+    out.values[k] = value * taper(f_hz) * pulse_at(f_hz);
   }
   out.values[0] = out.values[0].real();
   if (out.num_samples % 2 == 0) out.values[num_bins - 1] = out.values[num_bins - 1].real();
+
+  // What the taper takes away and the data do not hold, as far as four times the symbol rate.
+  const int coarse = coarse_samples_per_ui(m, std::min(0.5 * m, 4.0));
+  const Eigen::Index num_coarse = num_ui * coarse;
+  const Eigen::Index num_seen = std::min(num_bins, num_coarse / 2);
+  Eigen::VectorXcd missing = Eigen::VectorXcd::Zero(num_coarse / 2 + 1);
+  double energy_kept = out.values.squaredNorm(), energy_missing = 0.0;
+  for (Eigen::Index k = static_cast<Eigen::Index>(cut_hz / df); k < num_seen; ++k) {
+    const double f_hz = static_cast<double>(k) * df;
+    const Complex value =
+        k < num_inside
+            ? (*inside.value)[k]
+            : last * std::polar(std::exp(-fall_per_hz * (f_hz - top_hz)), -2 * pi * f_hz * delay_s);
+    const Complex lost = value * pulse_at(f_hz) - out.values[k];
+    energy_missing += std::norm(lost);
+    const double x = f_hz * grid.ui_s / 0.75;  // a receiver of three quarters of the symbol rate
+    missing[k] = lost * (static_cast<double>(coarse) / m) / std::sqrt(1 + std::pow(x, 8));
+  }
   out.energy_above_last_point =
       energy_missing > 0 ? energy_missing / (energy_kept + energy_missing) : 0.0;
 
-  const Eigen::VectorXd samples_v = real_record(out.values, out.num_samples);
+  // The band is narrow against the grid, so fewer samples show as much.
+  const int few = coarse_samples_per_ui(m, (1 + kTaperShare) * cut_hz * grid.ui_s);
+  const Eigen::VectorXd samples_v = real_record(
+      out.values.head(num_ui * few / 2 + 1) * (static_cast<double>(few) / m), num_ui * few);
   Eigen::Index peak = 0;
   const double peak_v = samples_v.cwiseAbs().maxCoeff(&peak);
+  if (f[0] > 0 && !response.ac_coupled) {
+    // A band of f_1 that is off by d shifts cursors by up to 2 f_1 T d each over 1 / f_1; some 128
+    // of them count, and together at most d.
+    const double at_dc = (*inside.value)[0].real();
+    const double size_v = std::abs(std::abs(at_dc) - std::abs(response.values[0])) *
+                          std::min(1.0, 2 * 128 * f[0] * grid.ui_s);
+    if (size_v > kWorthTelling * peak_v) {
+      result.notes.push_back(warning_at(place, 0,
+                                        "below the first point, " + significant(f[0] * 1e-6, 4) +
+                                            " MHz, the response is extrapolated to " +
+                                            significant(at_dc, 4) +
+                                            " at DC; all of that is worth " + mv(size_v) +
+                                            " of the sum of cursors at 1 V launch"));
+    }
+  }
   if (out.energy_above_last_point > 1e-5) {
-    const double size_v = sum_of_cursors(real_record(missing, out.num_samples), peak, m);
+    const double size_v =
+        sum_of_cursors(real_record(missing, num_coarse), peak * coarse / few, coarse);
     if (size_v > kWorthTelling * peak_v) {
       result.notes.push_back(warning_at(
           place, 0,
           "about " + significant(100 * out.energy_above_last_point, 2) +
               " % of the pulse's energy lies above the last point, " +
               significant(hz_to_ghz(cut_hz), 4) + " GHz; it could move the sum of cursors by " +
-              mv(size_v) + " at 1 V launch before the receiver's filters"));
+              mv(size_v) + " at 1 V launch, seen through a receiver of 0.75 of the symbol rate"));
     }
   }
   // The taper rings for about one over its width to both sides of an edge.
   const Quiet quiet =
-      quiet_part(samples_v, m, std::max(8.0, 2 / (kTaperShare * cut_hz * grid.ui_s)));
+      quiet_part(samples_v, few, std::max(8.0, 2 / (kTaperShare * cut_hz * grid.ui_s)));
   out.record_noise_v = quiet.rms_v;
   if (std::abs(quiet.mean_v) > 1e-3 * peak_v) {
     result.notes.push_back(
