@@ -48,7 +48,7 @@ CodedIsi::CodedIsi(LineCode code, Eigen::Index num_cursors, std::optional<Eigen:
         ", but it must be in 0 ... num_cursors - 1 = " + std::to_string(num_cursors - 1));
   }
   const auto states = static_cast<std::size_t>(code_.max_states());
-  weight_.assign(static_cast<std::size_t>(num_cursors + 2 * code_.max_symbols()), 0.0);
+  weight_.assign(static_cast<std::size_t>(num_cursors + 2 * code_.period()), 0.0);
   sum_.resize(static_cast<std::size_t>(code_.max_keys()));
   value_.resize(states);
   next_.resize(states);
@@ -61,7 +61,7 @@ void CodedIsi::load(const Eigen::Ref<const Eigen::VectorXd>& row, bool upward) {
                                 " cursors, but work was set up for " +
                                 std::to_string(num_cursors_));
   }
-  double* const weight = weight_.data() + code_.max_symbols();
+  double* const weight = weight_.data() + code_.period();
   for (Eigen::Index i = 0; i < num_cursors_; ++i) {
     const double r = row[num_cursors_ - 1 - i];
     weight[i] = upward ? r : -r;
@@ -73,19 +73,25 @@ template <bool kTrack>
 double CodedIsi::longest_path(int position, bool upward) {
   const int period = code_.period();
   const auto first = static_cast<int>(((position - main_in_order_) % period + period) % period);
-  const LineCode::Place place = code_.place(first);
+  // A sequence to be sent is made of whole characters; for its worth whole sections are enough.
+  LineCode::Place place = code_.place(first);
+  if constexpr (kTrack) place = {0, first};
+  const Eigen::Index end =
+      kTrack ? (num_cursors_ + first + period - 1) / period * period - first : num_cursors_;
   auto s = static_cast<std::size_t>(place.section);
   const auto& sections = code_.sections();
   std::fill_n(value_.begin(), sections[s].num_from, 0.0);
-  const double* const weight = weight_.data() + code_.max_symbols();
+  const double* const weight = weight_.data() + period;
   Choice* choice = choice_.data();
-  for (Eigen::Index at = -place.offset; at < num_cursors_;) {
+  int num_states = 0;
+  for (Eigen::Index at = -place.offset; at < end;) {
     const LineCode::Section& section = sections[s];
     sum_words(section, weight + at, sum_.data());
     if (main_in_order_ >= at && main_in_order_ < at + section.num_symbols()) {
       strike_out(section, static_cast<int>(main_in_order_ - at), upward, sum_.data());
     }
-    std::fill_n(next_.begin(), section.num_to, kNever);
+    num_states = section.num_to;
+    std::fill_n(next_.begin(), num_states, kNever);
     for (const LineCode::Branch& branch : section.branches) {
       const int* const key = section.key.data();
       double best = kNever;
@@ -107,42 +113,38 @@ double CodedIsi::longest_path(int position, bool upward) {
     std::swap(value_, next_);
     at += section.num_symbols();
     choice += code_.max_states();
-    s = (s + 1) % sections.size();
+    s = s + 1 == sections.size() ? 0 : s + 1;
   }
-  const std::size_t last = (s + sections.size() - 1) % sections.size();
-  const auto best = std::max_element(value_.begin(), value_.begin() + sections[last].num_to);
-  if constexpr (kTrack) {
-    // Back along the choices, from the last block to the first.
-    auto state = static_cast<int>(best - value_.begin());
-    const auto blocks = static_cast<std::size_t>(choice - choice_.data()) /
-                        static_cast<std::size_t>(code_.max_states());
-    Eigen::Index at = -place.offset;
-    std::size_t section_index = static_cast<std::size_t>(place.section);
-    for (std::size_t b = 0; b < blocks; ++b) {
-      at += sections[section_index].num_symbols();
-      section_index = (section_index + 1) % sections.size();
-    }
-    for (std::size_t b = blocks; b-- > 0;) {
-      section_index = (section_index + sections.size() - 1) % sections.size();
-      const LineCode::Section& section = sections[section_index];
-      at -= section.num_symbols();
-      const Choice& chosen = choice_[b * static_cast<std::size_t>(code_.max_states()) +
-                                     static_cast<std::size_t>(state)];
-      assert(chosen.word >= 0);
-      for (int i = 0; i < section.num_symbols(); ++i) {
-        const Eigen::Index order = at + i;
-        if (order < 0 || order >= num_cursors_) continue;
-        const double symbol = section.words(i, chosen.word);
-        cut_.signs[num_cursors_ - 1 - order] = upward ? symbol : -symbol;
-        if (order == main_in_order_) cut_.main_symbol = symbol;
-      }
-      state = chosen.from;
-    }
-    if (main_in_order_ >= 0) cut_.signs[num_cursors_ - 1 - main_in_order_] = 0.0;
-    cut_.position = position;
-    cut_.upward = upward;
+  const double most = *std::max_element(value_.begin(), value_.begin() + num_states);
+  if constexpr (kTrack) trace_back(first, position, upward);
+  return most;
+}
+
+// Back along the choices of a path through whole characters, from the last block to the first;
+// `first` symbols of the first character lie before the row.
+void CodedIsi::trace_back(Eigen::Index first, int position, bool upward) {
+  const Eigen::Index period = code_.period();
+  const auto& sections = code_.sections();
+  const Eigen::Index num_characters = (num_cursors_ + first + period - 1) / period;
+  auto block = static_cast<std::size_t>(num_characters) * sections.size();
+  auto state = static_cast<int>(
+      std::max_element(value_.begin(), value_.begin() + sections[0].num_from) - value_.begin());
+  cut_.sequence.resize(num_characters * period);
+  Eigen::Index at = cut_.sequence.size();
+  while (block-- > 0) {
+    const LineCode::Section& section = sections[block % sections.size()];
+    const Choice& chosen = choice_[block * static_cast<std::size_t>(code_.max_states()) +
+                                   static_cast<std::size_t>(state)];
+    assert(chosen.word >= 0);
+    at -= section.num_symbols();
+    cut_.sequence.segment(at, section.num_symbols()) = section.words.col(chosen.word);
+    state = chosen.from;
   }
-  return *best;
+  cut_.signs = (upward ? 1.0 : -1.0) * cut_.sequence.segment(first, num_cursors_).reverse();
+  if (main_in_order_ >= 0) cut_.signs[num_cursors_ - 1 - main_in_order_] = 0.0;
+  cut_.main_at = first + main_in_order_;
+  cut_.position = position;
+  cut_.upward = upward;
 }
 
 double CodedIsi::worst_at(const Eigen::Ref<const Eigen::VectorXd>& row, int position, bool upward) {
@@ -182,7 +184,9 @@ const CodeCut& CodedIsi::cut(const Eigen::Ref<const Eigen::VectorXd>& row) {
       }
     }
   }
-  choice_.resize(static_cast<std::size_t>((num_cursors_ + 1) * code_.max_states()));
+  // Whole characters reach past the row by less than one on either side.
+  choice_.resize(static_cast<std::size_t>(num_cursors_ / code_.period() + 2) *
+                 code_.sections().size() * static_cast<std::size_t>(code_.max_states()));
   load(row, direction);
   longest_path<true>(position, direction);
   return cut_;
@@ -199,11 +203,7 @@ CodedWorstCase coded_worst_case(const LineCode& code, const Eigen::Ref<const Eig
   }
   out.down_v = out.by_position_v.col(0).maxCoeff();
   out.up_v = out.by_position_v.col(1).maxCoeff();
-  const CodeCut& cut = work.cut(row);
-  out.position = cut.position;
-  out.upward = cut.upward;
-  out.sequence = (cut.upward ? 1.0 : -1.0) * cut.signs.reverse();
-  out.sequence[row.size() - 1 - main_index] = cut.main_symbol;
+  out.cut = work.cut(row);
   return out;
 }
 

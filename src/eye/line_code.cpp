@@ -350,6 +350,46 @@ std::string name_8b10b(std::uint8_t byte, bool control) {
   return (control ? "K" : "D") + std::to_string(byte & 31U) + "." + std::to_string(byte >> 5U);
 }
 
+std::vector<std::string> names_8b10b(const Eigen::VectorXd& levels) {
+  const auto number = [](const auto& bit) {
+    unsigned out = 0;
+    for (unsigned i = 0; i < 10; ++i) out |= (bit(i) ? 1U : 0U) << i;
+    return out;
+  };
+  struct Meaning {
+    std::string name;
+    int disparity_after = -1;
+  };
+  std::map<std::pair<int, unsigned>, Meaning> meanings;  // of (disparity before, bits)
+  for (const int disparity : {-1, 1}) {
+    for (unsigned b = 0; b < 512; ++b) {
+      const auto byte = static_cast<std::uint8_t>(b);
+      const bool control = b >= 256;
+      const unsigned x = byte & 31U;
+      if (control && x != 28 && !(byte >> 5U == 7 && is_other_control(x))) continue;
+      const Character8b10b sent = encode_8b10b(byte, control, disparity);
+      meanings[{disparity, number([&](unsigned i) { return sent.bits[i]; })}] = {
+          name_8b10b(byte, control), sent.disparity};
+    }
+  }
+  if (levels.size() % 10 != 0) return {};
+  for (int disparity : {-1, 1}) {
+    std::vector<std::string> names;
+    for (Eigen::Index at = 0; at < levels.size(); at += 10) {
+      const auto found = meanings.find(
+          {disparity, number([&](unsigned i) { return levels[at + Eigen::Index{i}] > 0.0; })});
+      if (found == meanings.end()) {
+        names.clear();
+        break;
+      }
+      names.push_back(found->second.name);
+      disparity = found->second.disparity_after;
+    }
+    if (!names.empty()) return names;
+  }
+  return {};
+}
+
 Eigen::VectorXd random_stream(const LineCode& code, Eigen::Index num_characters,
                               std::mt19937_64& random) {
   // Branches are sorted by their state: those of a state stand side by side.

@@ -104,6 +104,21 @@ TEST(Code8b10b, RefusesWhatIsNoCharacter) {
   EXPECT_THROW((void)encode_8b10b(0, false, 0), std::invalid_argument);
 }
 
+TEST(Code8b10b, NamesTheCharactersOfAStretch) {
+  Eigen::VectorXd levels(30);
+  int disparity = 1;
+  Eigen::Index at = 0;
+  for (const auto& [b, control] : {std::pair{byte(28, 5), true}, std::pair{byte(16, 2), false},
+                                   std::pair{byte(11, 7), false}}) {
+    const Character8b10b sent = encode_8b10b(b, control, disparity);
+    for (const bool bit : sent.bits) levels[at++] = bit ? 1.0 : -1.0;
+    disparity = sent.disparity;
+  }
+  EXPECT_EQ(names_8b10b(levels), (std::vector<std::string>{"K28.5", "D16.2", "D11.7"}));
+  EXPECT_TRUE(names_8b10b(levels.head(15)).empty());
+  EXPECT_TRUE(names_8b10b(Eigen::VectorXd::Ones(10)).empty());
+}
+
 // The trellis and the encoder are two ways to one language: what the trellis can send at each
 // state is what the encoder sends at that disparity, character by character.
 TEST(LineCode, TheTrellisOf8b10bHoldsExactlyTheEncodersCharacters) {

@@ -19,7 +19,9 @@ struct CodeCut {
   Eigen::VectorXd signs;     ///< in the order of the row
   int position = 0;          ///< of the main symbol in its character, 0 the first sent
   bool upward = false;       ///< the interference pushes up (main symbol below the highest level)
-  double main_symbol = 1.0;  ///< the level it has in the sequence
+  /// The sequence itself, in the order sent, filled up to whole characters on both sides.
+  Eigen::VectorXd sequence;
+  Eigen::Index main_at = 0;  ///< place of the main symbol in it
 };
 
 /// Finds the worst case of many rows of one shape without allocating (but for the first `cut`): for
@@ -53,6 +55,7 @@ class CodedIsi {
   void load(const Eigen::Ref<const Eigen::VectorXd>& row, bool upward);
   template <bool kTrack>
   double longest_path(int position, bool upward);
+  void trace_back(Eigen::Index first, int position, bool upward);
 
   LineCode code_;
   Eigen::Index num_cursors_;
@@ -73,12 +76,10 @@ struct CodedWorstCase {
   double down_v = 0.0;  ///< most that the others can take off a main symbol above the lowest level
   double up_v = 0.0;    ///< most that they can add to one below the highest level
   [[nodiscard]] double isi_v() const { return down_v > up_v ? down_v : up_v; }
-  int position = 0;               ///< of the main symbol where isi_v() occurs
-  bool upward = false;            ///< which of the two is the larger
   Eigen::MatrixXd by_position_v;  ///< (period, 2): downward and upward
-  /// The sequence that does it, in the order sent, as long as the row: entry i meets cursor
-  /// n - 1 - i. Ready for a pattern generator; any continuation of the code may surround it.
-  Eigen::VectorXd sequence;
+  /// The sequence that does it, ready for a pattern generator; any continuation that the code
+  /// allows may surround it.
+  CodeCut cut;
 };
 
 /// Shape, units, errors: as CodedIsi.

@@ -120,6 +120,11 @@ struct Character8b10b {
 /// Name of a character, such as "D21.5" or "K28.5".
 [[nodiscard]] std::string name_8b10b(std::uint8_t byte, bool control);
 
+/// The characters of a stretch of levels that begins with one, from whichever disparity fits.
+///
+/// Shape: levels is (10 n); positive counts as 1. Empty when it is no such stretch, or n is 0.
+[[nodiscard]] std::vector<std::string> names_8b10b(const Eigen::VectorXd& levels);
+
 /// A stretch of random data, `num_characters` whole characters from a random state.
 ///
 /// Shape: the result is (num_characters * period), levels in the order sent.
