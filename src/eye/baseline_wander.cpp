@@ -5,15 +5,21 @@
 #include <stdexcept>
 #include <string>
 
+#include "eye/instant.hpp"
 #include "tapwright/eye/coded_distribution.hpp"
 #include "tapwright/eye/coded_worst_case.hpp"
 
 namespace tapwright {
+namespace {
+
+bool in_range(double w) { return w >= 1e-6 && w <= 0.1; }
+
+}  // namespace
 
 BaselineWander baseline_wander(const LineCode& code, const Eigen::VectorXd& row,
                                Eigen::Index main_index, double corner_hz, double ui_s) {
   const double w = 2.0 * std::numbers::pi * corner_hz * ui_s;
-  if (!(w >= 1e-6 && w <= 0.1)) {
+  if (!in_range(w)) {
     throw std::invalid_argument("baseline_wander: 2 pi corner_hz ui_s = " + std::to_string(w) +
                                 ", but it must lie between 1e-6 and 0.1");
   }
@@ -47,6 +53,20 @@ BaselineWander baseline_wander(const LineCode& code, const Eigen::VectorXd& row,
       std::sqrt(variance * (out.tail_v.squaredNorm() - main * main +
                             last * last * decay * decay / (1.0 - decay * decay)));
   return out;
+}
+
+std::optional<BaselineWander> baseline_wander(const EyeModel& model, const Settings& settings) {
+  require_fit(model, settings);
+  const Link& link = model.link;
+  const double ui_s = link.signal.ui_s();
+  if (!link.high_pass_hz || !in_range(2.0 * std::numbers::pi * *link.high_pass_hz * ui_s)) {
+    return std::nullopt;
+  }
+  const PlacedEye eye = place_eye(model, place_of(settings));
+  const Instant instant = instant_of(eye, eye.phases.front(), settings.fir,
+                                     Eigen::VectorXd::Zero(settings.dfe_v.size()));
+  return baseline_wander(code_of(model), instant.residual.values, instant.residual.main_index,
+                         *link.high_pass_hz, ui_s);
 }
 
 }  // namespace tapwright

@@ -7,6 +7,7 @@
 #include "eye/instant.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
+#include "tapwright/eye/coded_worst_case.hpp"
 #include "tapwright/eye/sampling.hpp"
 
 namespace tapwright {
@@ -34,7 +35,8 @@ double width_ui(const std::function<double(Eigen::Index)>& height_at, int sample
   return std::min(1.0, width_samples / samples_per_ui);
 }
 
-double outside_span_of(const EyeModel& model, const Settings& settings, double amplitude_v) {
+double outside_span_of(const EyeModel& model, const LineCode& code, const Settings& settings,
+                       double amplitude_v) {
   const StatePulses& state = model.states[settings.ctle_index];
   const Eigen::Index per_ui = state.victim.samples_per_ui();
   const Eigen::Index at = state.peak_index() + settings.phase_samples;
@@ -43,8 +45,9 @@ double outside_span_of(const EyeModel& model, const Settings& settings, double a
       std::max<int>(model.span_ui[1], static_cast<int>((state.victim.size() - at) / per_ui) + 1);
   CursorRow row{cursors_at(state.victim, at, num_pre, num_post), num_pre};
   row.values.segment(num_pre - model.span_ui[0], model.span_ui[0] + model.span_ui[1] + 1).setZero();
-  return amplitude_v *
-         apply(model.link.device.transmitter.fir, settings.fir, row).values.lpNorm<1>();
+  const Eigen::VectorXd outside =
+      apply(model.link.device.transmitter.fir, settings.fir, row).values;
+  return amplitude_v * (code.independent() ? outside.lpNorm<1>() : coded_peak_v(code, outside));
 }
 
 EyeHeights heights_of(const PlacedEye& eye, const LineCode& code, const Eigen::VectorXd& fir,
@@ -105,6 +108,13 @@ Score score(const EyeModel& model, const Settings& settings) {
   score.gaussian_v = eye.quantile * score.sigma_v;
   score.sensitivity_v = link.device.receiver.sensitivity_v;
   score.residual_v = instant.residual;
+  CodedIsi worst(code, instant.residual.values.size(), instant.residual.main_index);
+  const CodeCut& cut = worst.cut(instant.residual.values);
+  score.worst_sequence = cut.sequence;
+  score.worst_sequence_main = cut.main_at;
+  if (link.signal.line_code.kind == LineCodeKind::k8b10b) {
+    score.worst_characters = names_8b10b(cut.sequence);
+  }
 
   score.height = heights_of(eye, code, settings.fir, settings.dfe_v);
   score.settled_dfe_v = settled_dfe(model, settings);
@@ -134,7 +144,7 @@ Score score(const EyeModel& model, const Settings& settings) {
   score.peak_input_v =
       eye.amplitude_v * peak_input_v(link.device.transmitter.fir, settings.fir, model.input);
   score.peak_input_limit_v = link.device.receiver.peak_input_v;
-  score.outside_span_v = outside_span_of(model, settings, eye.amplitude_v);
+  score.outside_span_v = outside_span_of(model, code, settings, eye.amplitude_v);
   score.missed = what_is_missed(model, score);
   return score;
 }

@@ -297,7 +297,8 @@ void read_channels(const Section& root, Link& link, InputFiles& files) {
   }
   if (const auto ps = transmitter.maybe("rise_time_ps"))
     conditions.launch.rise_time_s = ps_to_s(*ps);
-  if (const auto mhz = receiver.maybe("high_pass_mhz")) conditions.launch.high_pass_hz = *mhz * 1e6;
+  if (const auto mhz = receiver.maybe("high_pass_mhz")) link.high_pass_hz = *mhz * 1e6;
+  conditions.launch.high_pass_hz = link.high_pass_hz;
   conditions.source_ohm = transmitter.maybe("impedance_ohm");
   conditions.source_f = pf_to_f(transmitter.number("capacitance_pf"));
   conditions.load_ohm = receiver.maybe("impedance_ohm");

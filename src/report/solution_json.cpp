@@ -1,6 +1,9 @@
+#include <cmath>
 #include <nlohmann/json.hpp>
 
 #include "tapwright/base/units.hpp"
+#include "tapwright/eye/baseline_wander.hpp"
+#include "tapwright/eye/error_bursts.hpp"
 #include "tapwright/link/register_writes.hpp"
 #include "tapwright/report/solution_report.hpp"
 
@@ -69,6 +72,35 @@ Json score_json(const Score& s) {
           {"missed", s.missed}};
 }
 
+/// The symbols as digits, 0 the lowest level: what a pattern generator sends to see the worst case.
+Json worst_sequence_json(const Score& s, int levels) {
+  std::string digits;
+  for (const double symbol : s.worst_sequence) {
+    digits += static_cast<char>('0' + std::lround((symbol + 1.0) / 2.0 * (levels - 1)));
+  }
+  Json out = {{"symbols", digits}, {"main_at", s.worst_sequence_main}};
+  if (!s.worst_characters.empty()) out["characters"] = s.worst_characters;
+  return out;
+}
+
+Json wander_json(const BaselineWander& w) {
+  return {{"worst", mv(w.worst_v)},
+          {"rms", mv(w.rms_v)},
+          {"mean", mv(w.mean_v)},
+          {"worst_independent_symbols", mv(w.worst_independent_v)},
+          {"rms_independent_symbols", mv(w.rms_independent_v)}};
+}
+
+Json bursts_json(const ErrorBursts& b) {
+  std::vector<double> lengths(b.length_probability.begin(), b.length_probability.end());
+  while (lengths.size() > 1 && lengths.back() < 1e-12) lengths.pop_back();
+  return {{"length_probability", lengths},
+          {"mean_length", b.mean_length},
+          {"mean_errors", b.mean_errors},
+          {"error_ratio_without_feedback", b.start_probability},
+          {"error_ratio", b.error_ratio}};
+}
+
 const char* name_of(Proof::Kind kind) {
   switch (kind) {
     case Proof::Kind::kProven: return "proven";
@@ -113,6 +145,13 @@ std::string json_of(const SolutionReport& report) {
   }
   if (!writes.empty()) out["registers"] = writes;
   out["score"] = score_json(s.score);
+  out["worst_sequence"] = worst_sequence_json(s.score, model.link.signal.levels);
+  if (const auto wander = baseline_wander(model, s.settings)) {
+    out["baseline_wander_mv"] = wander_json(*wander);
+  }
+  if (const auto bursts = error_bursts(model, s.settings); bursts && s.settings.dfe_v.size() > 0) {
+    out["error_bursts"] = bursts_json(*bursts);
+  }
   out["proof"] = proof_json(s.proof);
   Json compared = Json::array();
   for (const Compared& c : s.compared) {

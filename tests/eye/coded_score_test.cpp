@@ -3,10 +3,12 @@
 #include <gtest/gtest.h>
 
 #include <cmath>
+#include <numbers>
 #include <random>
 
 #include "support/sample_link.hpp"
 #include "tapwright/base/normal.hpp"
+#include "tapwright/eye/baseline_wander.hpp"
 #include "tapwright/eye/error_bursts.hpp"
 #include "tapwright/eye/line_code.hpp"
 #include "tapwright/eye/score.hpp"
@@ -27,6 +29,40 @@ TEST(CodedScore, AFlatTailUnder8b10bCostsSixCursors) {
   EXPECT_NEAR(s.isi_v, 6 * 0.02, 1e-12);  // rounding of a transform there and back
   EXPECT_NEAR(s.isi_independent_v, 20 * 0.02, 1e-12);
   EXPECT_NEAR(s.height.worst_case_v, 2 * (1.0 - 0.12), 1e-12);
+}
+
+// The sequence in the score, sent through the link's own cursors, opens the eye just as far as the
+// score says, for any code; under 8b10b it comes with the names of its characters.
+TEST(CodedScore, TheWorstSequenceLeavesTheWorstCase) {
+  Eigen::VectorXd pulse(12);
+  pulse << 0.02, -0.05, 1.0, 0.21, -0.13, 0.08, 0.06, -0.04, 0.03, 0.02, 0.01, -0.01;
+  for (const LineCodeKind kind : {LineCodeKind::kNone, LineCodeKind::k8b10b, LineCodeKind::k64b66b,
+                                  LineCodeKind::kManchester}) {
+    Link link = link_of_pulse(pulse, 1);
+    link.signal.line_code.kind = kind;
+    const Score s = score(prepare(link), plain_settings(link));
+    double level_v = 0.0;
+    for (Eigen::Index k = -2; k < 10; ++k) {
+      level_v += pulse[k + 2] * s.worst_sequence[s.worst_sequence_main - k];
+    }
+    EXPECT_NEAR(2.0 * level_v * s.worst_sequence[s.worst_sequence_main], s.height.worst_case_v,
+                1e-12);
+    EXPECT_EQ(
+        s.worst_characters.size(),
+        kind == LineCodeKind::k8b10b ? static_cast<std::size_t>(s.worst_sequence.size() / 10) : 0U);
+  }
+}
+
+// By hand: w = 0.01, a main cursor of 1 V and no more; see the cases of the wander itself.
+TEST(CodedScore, TheWanderOfALinkIsThatOfItsCorner) {
+  Link link = link_of_pulse(Eigen::VectorXd::Constant(1, 1.0), 1);
+  EXPECT_FALSE(baseline_wander(prepare(link), plain_settings(link)).has_value());
+  link.high_pass_hz = 0.01 * link.signal.symbol_rate_bd / (2.0 * std::numbers::pi);
+  const auto wander = baseline_wander(prepare(link), plain_settings(link));
+  ASSERT_TRUE(wander.has_value());
+  EXPECT_NEAR(wander->worst_independent_v, 0.01 / std::expm1(0.01), 1e-12);
+  link.high_pass_hz = 1.0;
+  EXPECT_FALSE(baseline_wander(prepare(link), plain_settings(link)).has_value());
 }
 
 Link noisy_link(LineCodeKind kind) {

@@ -6,6 +6,9 @@
 #include <limits>
 #include <random>
 #include <set>
+#include <vector>
+
+#include "support/python.hpp"
 
 namespace tapwright {
 namespace {
@@ -129,9 +132,9 @@ TEST(CodedWorstCase, OfALopsidedMachineEqualsBruteForceForBothSigns) {
 }
 
 // Checks row 7. Source: digital sum within +-3 (Widmer and Franaszek 1983): any stretch sums to at
-// most 6, and whole characters reach it. An odd number of +-1 has an odd sum, so 5 is the most
-// there; +-3 stand only at some places of a character, so 4 is the most at lengths 4 and 6 mod 10
-// (recomputed by a set of reachable sums over the published tables, in another language).
+// most 6, and stretches of whole characters reach it. An odd number of +-1 has an odd sum, so 5 is
+// the most there; +-3 stand only at some places of a character, so 4 is the most at lengths 4 and 6
+// mod 10 (recomputed by the script of the next test).
 TEST(CodedWorstCase, OfAFlatTailUnder8b10bIsSixTimesTheCursor) {
   const double r = 0.01;
   const LineCode code = LineCode::code_8b10b();
@@ -140,6 +143,31 @@ TEST(CodedWorstCase, OfAFlatTailUnder8b10bIsSixTimesTheCursor) {
     row[0] = 1.0;
     const int most = length % 2 == 1 ? 5 : length % 10 == 4 || length % 10 == 6 ? 4 : 6;
     EXPECT_NEAR(coded_worst_case(code, row, 0).isi_v(), most * r, rounding(row)) << length;
+  }
+}
+
+// Independent: longest paths over whole characters in numpy, tables written down a second time.
+TEST(CodedWorstCase, Of8b10bEqualsNumpysLongestPath) {
+  if (!test::has_scipy()) GTEST_SKIP() << "no numpy";
+  const auto reference = test::run_python("tests/outside/line_code_reference.py");
+  ASSERT_TRUE(reference.has_value());
+  const LineCode code = LineCode::code_8b10b();
+  Eigen::Index length = 20;
+  for (const double most : (*reference)["flat"]) {
+    EXPECT_NEAR(coded_peak_v(code, Eigen::VectorXd::Ones(length)), most, 1e-12) << length;
+    ++length;
+  }
+  EXPECT_EQ(length, 81);
+  for (const auto& sample : (*reference)["rows"]) {
+    const auto values = sample["row"].get<std::vector<double>>();
+    const Eigen::VectorXd row =
+        Eigen::Map<const Eigen::VectorXd>(values.data(), static_cast<Eigen::Index>(values.size()));
+    const CodedWorstCase found =
+        coded_worst_case(code, row, sample["main_index"].get<Eigen::Index>());
+    for (int p = 0; p < 10; ++p) {
+      EXPECT_NEAR(found.by_position_v(p, 0), sample["worst"][static_cast<std::size_t>(p)],
+                  rounding(row));
+    }
   }
 }
 

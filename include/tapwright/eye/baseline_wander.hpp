@@ -2,7 +2,9 @@
 // What AC coupling does to the baseline, with and without a line code.
 
 #include <Eigen/Core>
+#include <optional>
 
+#include "tapwright/eye/eye_model.hpp"
 #include "tapwright/eye/line_code.hpp"
 
 namespace tapwright {
@@ -34,5 +36,10 @@ struct BaselineWander {
 [[nodiscard]] BaselineWander baseline_wander(const LineCode& code, const Eigen::VectorXd& row,
                                              Eigen::Index main_index, double corner_hz,
                                              double ui_s);
+
+/// Of a setting's pulse before the DFE, for the corner of the link; empty without AC coupling, or
+/// with a corner outside the range above.
+[[nodiscard]] std::optional<BaselineWander> baseline_wander(const EyeModel& model,
+                                                            const Settings& settings);
 
 }  // namespace tapwright

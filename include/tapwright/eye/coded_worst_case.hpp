@@ -16,9 +16,9 @@ namespace tapwright {
 /// linear in the row, so each cut is a bound that holds for every row: the worst case of any row is
 /// at least that. signs[main_index] = 0.
 struct CodeCut {
-  Eigen::VectorXd signs;     ///< in the order of the row
-  int position = 0;          ///< of the main symbol in its character, 0 the first sent
-  bool upward = false;       ///< the interference pushes up (main symbol below the highest level)
+  Eigen::VectorXd signs;  ///< in the order of the row
+  int position = 0;       ///< of the main symbol in its character, 0 the first sent
+  bool upward = false;    ///< the interference pushes up (main symbol below the highest level)
   /// The sequence itself, in the order sent, filled up to whole characters on both sides.
   Eigen::VectorXd sequence;
   Eigen::Index main_at = 0;  ///< place of the main symbol in it

@@ -47,8 +47,13 @@ struct Score {
 
   double peak_input_v = 0.0;  ///< receiver input, peak differential
   std::optional<double> peak_input_limit_v;
-  double outside_span_v = 0.0;  ///< worst-case sum that the span leaves out, for these taps
+  double outside_span_v = 0.0;  ///< worst case, under the code, of what the span leaves out
   CursorRow residual_v;         ///< r_k; entry main_index is q_0
+  /// The symbols that make isi_v, in the order sent, whole characters of the line code; entry
+  /// worst_sequence_main is the main symbol.
+  Eigen::VectorXd worst_sequence;
+  Eigen::Index worst_sequence_main = 0;
+  std::vector<std::string> worst_characters;  ///< their names, under 8b10b
 
   std::vector<std::string> missed;  ///< what keeps the target from being met, one line each
   [[nodiscard]] bool target_met() const { return missed.empty(); }

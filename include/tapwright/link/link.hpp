@@ -92,6 +92,7 @@ struct Link {
   ObjectiveKind objective = ObjectiveKind::kWorstCase;
   SamplingRule sampling = SamplingRule::kBest;
   double mask_width_ui = 0.0;
+  std::optional<double> high_pass_hz;  ///< AC coupling, already part of the pulses
   std::vector<RegisterField> registers;
   std::vector<InputFile> inputs;
   std::vector<Diagnostic> warnings;  ///< what was assumed or looks odd in the input
