@@ -9,7 +9,10 @@
 #include <numbers>
 #include <stdexcept>
 
+#include "channel/input_stream.hpp"
+#include "tapwright/base/digest.hpp"
 #include "tapwright/base/text.hpp"
+#include "tapwright/channel/text_file.hpp"
 
 namespace tapwright {
 namespace {
@@ -130,31 +133,46 @@ const std::vector<std::string> kKeywords = {"[version]",
                                             "[begin information]",
                                             "[end information]"};
 
+/// Takes text in pieces of whole lines.
 class Reader {
  public:
-  Reader(std::string_view text, std::string_view file, std::optional<int> num_ports)
-      : text_(text), file_(file), given_ports_(num_ports) {}
+  Reader(std::string_view file, std::optional<int> num_ports)
+      : file_(file), given_ports_(num_ports) {}
 
-  Result<Network> read() {
-    if (text_.starts_with("\xEF\xBB\xBF")) text_.remove_prefix(3);
-    if (text_.starts_with("\xFF\xFE") || text_.starts_with("\xFE\xFF")) {
-      error(1, "found UTF-16 text; wanted plain ASCII or UTF-8");
-      return finish();
+  /// The first piece holds the first point whole, if it can; `share` is its part of the text.
+  void begin(std::string_view piece, double share) {
+    if (piece.starts_with("\xEF\xBB\xBF")) piece.remove_prefix(3);
+    if (piece.starts_with("\xFF\xFE") || piece.starts_with("\xFE\xFF")) {
+      return fatal(1, "found UTF-16 text; wanted plain ASCII or UTF-8");
     }
     if (given_ports_ && (*given_ports_ < 1 || *given_ports_ > kMaxPorts)) {
-      error(0, "found " + std::to_string(*given_ports_) + " ports; wanted 1 to " +
-                   std::to_string(kMaxPorts));
-      return finish();
+      return fatal(0, "found " + std::to_string(*given_ports_) + " ports; wanted 1 to " +
+                          std::to_string(kMaxPorts));
     }
-    survey();
-    Lines lines(text_);
+    survey(piece);
+    if (share < 1.0) {
+      num_words_ = static_cast<Index>(1.02 * static_cast<double>(num_words_) / share);
+    }
+    add(piece);
+  }
+
+  void add(std::string_view piece) {
+    Lines lines(piece);
     std::string_view line;
-    while (!stop_ && section_ != Section::kEnd && lines.next(line)) {
-      line_ = lines.number();
+    const int lines_before = line_;
+    while (wants_more() && lines.next(line)) {
+      line_ = lines_before + lines.number();
       take(content(line));
     }
+  }
+
+  [[nodiscard]] bool failed() const { return stop_ && num_errors_ > 0; }
+  [[nodiscard]] bool wants_more() const { return !stop_ && section_ != Section::kEnd; }
+
+  Result<Network> finish() {
     if (!stop_) close();
-    return finish();
+    if (num_errors_ > 0) return {std::nullopt, std::move(notes_)};
+    return {std::move(network_), std::move(notes_)};
   }
 
  private:
@@ -178,19 +196,14 @@ class Reader {
     notes_.push_back(warning_at(std::string(file_), line, std::move(message)));
   }
 
-  Result<Network> finish() {
-    if (num_errors_ > 0) return {std::nullopt, std::move(notes_)};
-    return {std::move(network_), std::move(notes_)};
-  }
-
   // Survey -----------------------------------------------------------------------------------
 
-  /// One quick pass: how many numbers the text can hold at most, which sizes the storage once, and
-  /// how many the first point has, which gives the number of ports where nothing else does. Every
+  /// One quick pass: how many numbers the piece can hold at most, which sizes the storage, and how
+  /// many the first point has, which gives the number of ports where nothing else does. Every
   /// point opens with a frequency, so that its first line holds an odd count and the others an
   /// even one.
-  void survey() {
-    Lines lines(text_);
+  void survey(std::string_view piece) {
+    Lines lines(piece);
     std::string_view line;
     bool first_point_ended = false;
     while (lines.next(line)) {
@@ -711,6 +724,11 @@ class Reader {
   void close_point() {
     got_ = 0;
     if (!point_good_) return;
+    if (num_points_ == network_.frequencies_hz.size()) {
+      const Index larger = num_points_ + num_points_ / 2 + 1;
+      network_.frequencies_hz.conservativeResize(larger);
+      network_.values.conservativeResize(Eigen::NoChange, larger);
+    }
     Complex* const target = network_.values.col(num_points_).data();
     for (std::size_t i = 0; i < offsets_.size(); ++i) {
       const Complex value = complex_of(point_[1 + 2 * i], point_[2 + 2 * i]);
@@ -868,7 +886,6 @@ class Reader {
     return -(a - b).partialPivLu().solve(a + b);
   }
 
-  std::string_view text_;
   std::string_view file_;
   std::optional<int> given_ports_;
   std::optional<int> by_name_;
@@ -973,7 +990,45 @@ std::optional<int> ports_from_file_name(std::string_view file_name) {
 
 Result<Network> parse_touchstone(std::string_view text, std::string_view file_name,
                                  std::optional<int> num_ports) {
-  return Reader(text, file_name, num_ports).read();
+  Reader reader(file_name, num_ports);
+  reader.begin(text, 1.0);
+  return reader.finish();
+}
+
+Result<TouchstoneFile> read_touchstone(const std::string& path, std::optional<int> num_ports) {
+  InputStream stream(path, kLargestInputFile);
+  Reader reader(path, num_ports);
+  Sha256 digest;
+  // Pieces end with a line; a line longer than a piece makes the buffer grow.
+  std::string buffer(std::size_t{1} << 22, '\0');
+  std::size_t filled = 0;
+  bool begun = false;
+  for (bool at_end = false; !at_end && !reader.failed();) {
+    if (filled == buffer.size()) buffer.resize(2 * buffer.size());
+    const std::size_t got = stream.read(buffer.data() + filled, buffer.size() - filled);
+    digest.update({buffer.data() + filled, got});
+    filled += got;
+    at_end = got == 0;
+    if (!at_end && filled < buffer.size()) continue;
+    const std::string_view held(buffer.data(), filled);
+    const std::size_t feed = held.rfind('\n');
+    if (!at_end && feed == std::string_view::npos) continue;
+    const std::string_view piece = at_end ? held : held.substr(0, feed + 1);
+    if (begun) {
+      reader.add(piece);
+    } else {
+      const double whole = static_cast<double>(stream.size().value_or(filled));
+      reader.begin(piece, at_end || whole <= 0.0 ? 1.0 : static_cast<double>(piece.size()) / whole);
+      begun = true;
+    }
+    filled -= piece.size();
+    buffer.erase(0, piece.size());
+    buffer.resize(std::max(buffer.size() + piece.size(), std::size_t{1} << 22));
+  }
+  if (stream.failure()) return failure<TouchstoneFile>(*stream.failure());
+  Result<Network> network = reader.finish();
+  if (!network) return {std::nullopt, std::move(network.notes)};
+  return {TouchstoneFile{std::move(*network.value), digest.hex()}, std::move(network.notes)};
 }
 
 std::string write_touchstone(const Network& network, const TouchstoneOptions& options) {

@@ -1,13 +1,20 @@
 #include "tapwright/channel/touchstone.hpp"
 
 #include <gtest/gtest.h>
+#include <sys/stat.h>
+#include <unistd.h>
 
 #include <cmath>
+#include <filesystem>
+#include <fstream>
 #include <random>
 #include <sstream>
+#include <thread>
 
 #include "support/input_files.hpp"
 #include "support/measured_data.hpp"
+#include "tapwright/base/digest.hpp"
+#include "tapwright/channel/text_file.hpp"
 
 namespace tapwright {
 namespace {
@@ -172,6 +179,45 @@ TEST(Touchstone, KeepsValuesToRoundingInMagnitudeAndDecibelForm) {
                 64 * std::numeric_limits<double>::epsilon() * std::abs(wanted));
     }
   }
+}
+
+TEST(Touchstone, ReadsALargeFilePieceByPieceAsItReadsTheWholeText) {
+  const std::filesystem::path folder = std::filesystem::temp_directory_path();
+  const std::string path =
+      (folder / ("tapwright_touchstone_" + std::to_string(::getpid()) + ".s8p")).string();
+  std::mt19937_64 generator(4);
+  // Some 12 MB: three pieces.
+  const Network network = random_network(8, 4500, generator);
+  std::string text = write_touchstone(network);
+  std::ofstream(path, std::ios::binary) << text;
+  const auto result = read_touchstone(path);
+  ASSERT_TRUE(result) << notes_text(result.notes);
+  expect_same_bits(network, result.value->network);
+  EXPECT_EQ(result.value->sha256, sha256_hex(text));
+  EXPECT_EQ(file_sha256(path).value, sha256_hex(text));
+  // An error far behind keeps its line.
+  text += "x\n";
+  std::ofstream(path, std::ios::binary) << text;
+  EXPECT_EQ(notes_text(read_touchstone(path).notes),
+            notes_text(parse_touchstone(text, path).notes));
+  EXPECT_FALSE(read_touchstone(path));
+  std::filesystem::remove(path);
+  EXPECT_EQ(notes_text(read_touchstone(path).notes), "file: error: no such file\n");
+}
+
+TEST(Touchstone, ReadsAPipeWhoseSizeNobodyKnows) {
+  const std::string path = (std::filesystem::temp_directory_path() /
+                            ("tapwright_touchstone_" + std::to_string(::getpid()) + "_pipe.s8p"))
+                               .string();
+  ASSERT_EQ(::mkfifo(path.c_str(), 0600), 0);
+  std::mt19937_64 generator(5);
+  const Network network = random_network(8, 4500, generator);
+  std::thread writer([&] { std::ofstream(path, std::ios::binary) << write_touchstone(network); });
+  const auto result = read_touchstone(path);
+  writer.join();
+  std::filesystem::remove(path);
+  ASSERT_TRUE(result) << notes_text(result.notes);
+  expect_same_bits(network, result.value->network);
 }
 
 TEST(Touchstone, TakesTheNumberOfPortsFromTheNameInEitherCase) {

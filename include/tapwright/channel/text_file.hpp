@@ -23,4 +23,8 @@ constexpr std::size_t kLargestInputFile = std::size_t{2} << 30;
 [[nodiscard]] Result<TextFile> read_text_file(const std::string& path,
                                               std::size_t max_bytes = kLargestInputFile);
 
+/// The digest alone, without holding the file in memory. Errors: as read_text_file.
+[[nodiscard]] Result<std::string> file_sha256(const std::string& path,
+                                              std::size_t max_bytes = kLargestInputFile);
+
 }  // namespace tapwright

@@ -27,6 +27,17 @@ namespace tapwright {
 [[nodiscard]] Result<Network> parse_touchstone(std::string_view text, std::string_view file_name,
                                                std::optional<int> num_ports = std::nullopt);
 
+struct TouchstoneFile {
+  Network network;
+  std::string sha256;  ///< of the file's bytes, 64 lower-case hexadecimal digits
+};
+
+/// Reads and parses a file piece by piece, so that its text is never whole in memory.
+///
+/// Errors: those of read_text_file and parse_touchstone.
+[[nodiscard]] Result<TouchstoneFile> read_touchstone(const std::string& path,
+                                                     std::optional<int> num_ports = std::nullopt);
+
 struct TouchstoneOptions {
   enum class Format { kRealImaginary, kMagnitudeAngle, kDecibelAngle };
   enum class Unit { kHz, kKhz, kMhz, kGhz };
