@@ -271,8 +271,11 @@ std::optional<WorstReflection> worst_reflection_of(const Network& path, const Pa
   // counts, not the measured path: what a model can't show is missing from both.
   const Boundaries boundaries = peeled(path, 0, 1.5 * delay_s + 4.0 / top, 0.5);
   const Index middle = at - 1 + boundaries.lead;
+  // As many frequencies as the models' echoes need, whatever the file has.
+  const auto steps = std::max<Index>(1000, static_cast<Index>(std::ceil(8.0 * delay_s * top)));
+  const VectorXd grid = VectorXd::LinSpaced(steps + 1, 0.0, top);
   const auto eye_without = [&](Index from, Index to) {
-    return eye_of(f, layered_through(f, boundaries, from, to, fit, delay_s, symbol_rate_bd),
+    return eye_of(grid, layered_through(grid, boundaries, from, to, fit, delay_s, symbol_rate_bd),
                   symbol_rate_bd);
   };
   const auto with = eye_without(0, 0);
