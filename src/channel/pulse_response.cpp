@@ -1,5 +1,6 @@
 #include "tapwright/channel/pulse_response.hpp"
 
+#include <algorithm>
 #include <cmath>
 #include <stdexcept>
 #include <string>
@@ -23,9 +24,9 @@ PulseResponse::PulseResponse(Eigen::VectorXd samples_v, int samples_per_ui, doub
 }
 
 Eigen::Index PulseResponse::peak_index() const {
-  Eigen::Index index = 0;
-  samples_v_.maxCoeff(&index);
-  return index;
+  // In two passes: the first one runs at memory speed, the second is short.
+  const double peak_v = samples_v_.maxCoeff();
+  return std::find(samples_v_.begin(), samples_v_.end(), peak_v) - samples_v_.begin();
 }
 
 Eigen::VectorXd cursors_at(const PulseResponse& pulse, Eigen::Index sample_index, int num_pre,

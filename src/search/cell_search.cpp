@@ -11,6 +11,7 @@ namespace tapwright::search {
 namespace {
 
 constexpr double kTie = 1e-12;        // volts: the step of height_key
+constexpr double kMargin = 0.05;      // of the incumbent: costs a cut, saves relaxations
 constexpr int kNumSeedStates = 3;     // states searched for a first good setting
 constexpr int kNumSeedPhases = 4;
 constexpr int kBatch = 16;            // open cells that share one incumbent: no matter how many threads
@@ -23,10 +24,18 @@ struct OpenCell {
   std::vector<double> x;
 };
 
-/// How a cell was closed, for the certificate.
+/// How a cell was closed, for the certificate: by trees of its own, or by the signs of another cell
+/// of its state (an index in sign_sources_), or by no signs at all.
+constexpr int kOwnTrees = -1;
+constexpr int kNoSigns = -2;
 struct ClosedCell {
   Eigen::Index phase_samples = 0;
-  std::vector<std::vector<TreeNode>> trees;
+  std::vector<std::vector<TreeNode>> trees;  ///< one a root box
+  int source = kOwnTrees;
+};
+struct SignSource {
+  Eigen::Index phase_samples = 0;
+  Multipliers multipliers;
 };
 
 struct Placed {
@@ -74,6 +83,7 @@ class Search {
 
   SearchResult run() {
     closed_.resize(source_.num_states);
+    sign_sources_.resize(source_.num_states);
     seed();
     step("relaxation, rounded", std::numeric_limits<double>::infinity());
     scan_all();
@@ -95,19 +105,29 @@ class Search {
     return control_.stopped() || (deadline_ && std::chrono::steady_clock::now() > *deadline_);
   }
 
-  [[nodiscard]] std::vector<double> middle() const {
-    std::vector<double> x;
-    for (const Knob& knob : source_.make(0)->knobs()) x.push_back(0.5 * (knob.lo + knob.hi));
-    return x;
-  }
+  /// One cell after another of one state, each helping the next.
+  struct Walker {
+    explicit Walker(std::unique_ptr<Cell> first_cell)
+        : cell(std::move(first_cell)), relaxer(*cell), roots(cell->roots()), a(cell->knobs().size()) {
+      for (const Knob& knob : cell->knobs()) x.push_back(0.5 * (knob.lo + knob.hi));
+    }
+    std::unique_ptr<Cell> cell;
+    Relaxer relaxer;
+    std::vector<Box> roots;
+    std::vector<double> x;  ///< of the last relaxation's best root: where the next one starts
+    std::vector<double> a;  ///< scratch
+    Multipliers multipliers;  ///< of that root
+    Signs signs;
+  };
 
-  /// The relaxation over all roots of the cell's present place; x of the best root.
-  double relax_roots(Cell& cell, Relaxer& relaxer, double stop_below_v,
-                     std::vector<double>& x, std::vector<std::vector<TreeNode>>* trees) {
+  /// The relaxation over all roots at the walker's present place.
+  static double relax_roots(Walker& walker, double stop_below_v,
+                            std::vector<std::vector<TreeNode>>* trees) {
     double bound_v = kImpossible;
-    std::vector<double> best_x;
-    for (const Box& root : cell.roots()) {
-      relaxer.reset(root, x);
+    const std::vector<double> start = walker.x;
+    for (const Box& root : walker.roots) {
+      Relaxer& relaxer = walker.relaxer;
+      relaxer.reset(root, start);
       const Relaxation relaxation = relaxer.relax(root, stop_below_v);
       if (trees != nullptr) {
         const bool empty = relaxation.status == Relaxation::Status::kEmpty;
@@ -116,10 +136,19 @@ class Search {
       }
       if (relaxation.bound_v > bound_v) {
         bound_v = relaxation.bound_v;
-        best_x.assign(relaxer.x().begin(), relaxer.x().end());
+        walker.x.assign(relaxer.x().begin(), relaxer.x().end());
+        if (walker.cell->has_sign_bound()) walker.multipliers = relaxer.multipliers();
       }
     }
-    if (!best_x.empty()) x = std::move(best_x);
+    return bound_v;
+  }
+
+  /// What the last relaxation's signs say at the walker's present place.
+  static double sign_bound(Walker& walker) {
+    double bound_v = kImpossible;
+    for (const Box& root : walker.roots) {
+      bound_v = std::max(bound_v, walker.cell->sign_bound(root, walker.signs, walker.a));
+    }
     return bound_v;
   }
 
@@ -129,23 +158,24 @@ class Search {
     std::vector<OpenCell> starts(source_.num_states);
     parallel_for(static_cast<int>(source_.num_states), control_.num_threads, [&](int i) {
       const auto s = static_cast<std::size_t>(i);
-      const std::unique_ptr<Cell> cell = source_.make(s);
-      Relaxer relaxer(*cell);
-      cell->move_to(0);
-      starts[s] = {s, 0, 0.0, middle()};
-      starts[s].bound_v = relax_roots(*cell, relaxer, kImpossible, starts[s].x, nullptr);
+      Walker walker(source_.make(s));
+      walker.cell->move_to(0);
+      const double bound_v = relax_roots(walker, kImpossible, nullptr);
+      starts[s] = {s, 0, bound_v, walker.x};
     });
     by_bound(starts);
     for (std::size_t i = 0; i < std::min<std::size_t>(kNumSeedStates, starts.size()); ++i) {
-      const std::unique_ptr<Cell> cell = source_.make(starts[i].state);
-      Relaxer relaxer(*cell);
+      Walker walker(source_.make(starts[i].state));
+      Cell* cell = walker.cell.get();
       std::vector<OpenCell> cells;
-      std::vector<double> x = starts[i].x;
+      walker.x = starts[i].x;
       for (const Eigen::Index phase : phases_) {
         cell->move_to(phase);
         if (cell->quick_bound() < best_.height_v()) continue;
-        const double bound_v = relax_roots(*cell, relaxer, best_.height_v(), x, nullptr);
-        if (bound_v > best_.height_v()) cells.push_back({starts[i].state, phase, bound_v, x});
+        const double bound_v = relax_roots(walker, best_.height_v(), nullptr);
+        if (bound_v > best_.height_v()) {
+          cells.push_back({starts[i].state, phase, bound_v, walker.x});
+        }
       }
       by_bound(cells);
       cells.resize(std::min<std::size_t>(cells.size(), kNumSeedPhases));
@@ -168,31 +198,41 @@ class Search {
     const double incumbent_v = best_.height_v();
     parallel_for(static_cast<int>(source_.num_states), control_.num_threads, [&](int i) {
       const auto s = static_cast<std::size_t>(i);
-      const std::unique_ptr<Cell> cell = source_.make(s);
-      Relaxer relaxer(*cell);
-      std::vector<double> x = middle();
+      Walker walker(source_.make(s));
+      Cell* cell = walker.cell.get();
+      const double close_below_v = incumbent_v - kTie;
+      // A little lower than needed, so that the signs still serve at the next instants.
+      const double relax_to_v = close_below_v - kMargin * std::abs(incumbent_v);
+      bool has_signs = false;
       for (const Eigen::Index phase : phases_) {
         if (out_of_time()) {  // no bound: the cell stays open with all that it could be
-          open_of[s].push_back({s, phase, std::numeric_limits<double>::infinity(), x});
+          open_of[s].push_back({s, phase, std::numeric_limits<double>::infinity(), walker.x});
           continue;
         }
         cell->move_to(phase);
-        std::vector<std::vector<TreeNode>> trees;
-        const double quick_v = cell->quick_bound();
-        if (quick_v < incumbent_v - kTie) {
+        if (cell->quick_bound() < close_below_v) {
+          if (options_.certificate) closed_[s].push_back({phase, {}, kNoSigns});
+          continue;
+        }
+        if (has_signs && sign_bound(walker) < close_below_v) {
           if (options_.certificate) {
-            for (std::size_t r = 0; r < cell->roots().size(); ++r) trees.push_back({TreeNode{}});
-            closed_[s].push_back({phase, std::move(trees)});
+            closed_[s].push_back({phase, {}, static_cast<int>(sign_sources_[s].size()) - 1});
           }
           continue;
         }
         ++nodes_of[s];
-        const double bound_v = relax_roots(*cell, relaxer, incumbent_v - kTie, x,
-                                           options_.certificate ? &trees : nullptr);
-        if (bound_v >= incumbent_v - kTie) {
-          open_of[s].push_back({s, phase, bound_v, x});
+        std::vector<std::vector<TreeNode>> trees;
+        const double bound_v =
+            relax_roots(walker, relax_to_v, options_.certificate ? &trees : nullptr);
+        if (bound_v >= close_below_v) {
+          open_of[s].push_back({s, phase, bound_v, walker.x});
         } else if (options_.certificate) {
-          closed_[s].push_back({phase, std::move(trees)});
+          closed_[s].push_back({phase, std::move(trees), kOwnTrees});
+        }
+        if (bound_v != kImpossible && cell->has_sign_bound()) {
+          cell->take_signs(walker.multipliers, walker.signs);
+          has_signs = true;
+          if (options_.certificate) sign_sources_[s].push_back({phase, walker.multipliers});
         }
       }
       control_.report(static_cast<double>(i) / static_cast<double>(source_.num_states), "bounding");
@@ -227,7 +267,7 @@ class Search {
         best_.offer(open.state, open.phase_samples, tree.best);
         open_bound_v_ = std::max(open_bound_v_, std::min(tree.open_bound_v, open.bound_v));
         if (options_.certificate) {
-          closed_[open.state].push_back({open.phase_samples, std::move(tree.trees)});
+          closed_[open.state].push_back({open.phase_samples, std::move(tree.trees), kOwnTrees});
         }
       }
       control_.report(static_cast<double>(from + count) / static_cast<double>(open_.size()),
@@ -267,6 +307,23 @@ class Search {
     return Eigen::Map<const Eigen::VectorXd>(taps.data(), static_cast<Eigen::Index>(taps.size()));
   }
 
+  std::size_t add_multipliers(const Multipliers& from, std::size_t cell, Certificate& proof) const {
+    Certificate::Multipliers multipliers;
+    multipliers.cell = cell;
+    for (const auto& x : from.points) multipliers.points.push_back(all_taps(x));
+    for (const auto& x : from.row_points) multipliers.input_points.push_back(all_taps(x));
+    multipliers.weights = from.weights;
+    multipliers.input_weights = from.row_weights;
+    if (!model_.link.crosstalk.empty()) {
+      for (const auto& side : from.side_points) {
+        multipliers.crosstalk_points.emplace_back(Eigen::Map<const Eigen::VectorXd>(
+            side.data(), static_cast<Eigen::Index>(side.size())));
+      }
+    }
+    proof.multipliers.push_back(std::move(multipliers));
+    return proof.multipliers.size() - 1;
+  }
+
   void add_nodes(const std::vector<TreeNode>& tree, Certificate& proof,
                  Certificate::Cell& cell) const {
     for (const TreeNode& node : tree) {
@@ -275,22 +332,7 @@ class Search {
       out.tap = space_.tap_of(node.knob);
       out.at = node.at + space_.first_code(node.knob);
       if (node.kind == TreeNode::Kind::kBound || node.kind == TreeNode::Kind::kEmpty) {
-        Certificate::Multipliers multipliers;
-        multipliers.cell = proof.cells.size();
-        for (const auto& x : node.multipliers.points) multipliers.points.push_back(all_taps(x));
-        for (const auto& x : node.multipliers.row_points) {
-          multipliers.input_points.push_back(all_taps(x));
-        }
-        multipliers.weights = node.multipliers.weights;
-        if (!model_.link.crosstalk.empty()) {
-          for (const auto& side : node.multipliers.side_points) {
-            multipliers.crosstalk_points.emplace_back(Eigen::Map<const Eigen::VectorXd>(
-                side.data(), static_cast<Eigen::Index>(side.size())));
-          }
-        }
-        multipliers.input_weights = node.multipliers.row_weights;
-        out.multipliers = proof.multipliers.size();
-        proof.multipliers.push_back(std::move(multipliers));
+        out.multipliers = add_multipliers(node.multipliers, proof.cells.size(), proof);
       }
       cell.nodes.push_back(out);
     }
@@ -312,16 +354,43 @@ class Search {
     add_trees(straddling, depth + 1, tree, proof, cell);
   }
 
-  [[nodiscard]] Certificate certificate() const {
+  [[nodiscard]] Certificate certificate() {
     Certificate proof;
     proof.bound_v = result_.bound_v;
     const std::vector<int> straddling = space_.straddling(space_.knobs());
+    const std::size_t num_roots = space_.roots(space_.knobs()).size();
     for (std::size_t s = 0; s < source_.num_states; ++s) {
-      for (const ClosedCell& closed : closed_[s]) {
-        const Place place = source_.make(s)->place();
+      const std::size_t first_cell = proof.cells.size();
+      const auto cell_of = [&](Eigen::Index phase) {
+        const auto at = std::find_if(
+            closed_[s].begin(), closed_[s].end(),
+            [&](const ClosedCell& closed) { return closed.phase_samples == phase; });
+        return first_cell + static_cast<std::size_t>(at - closed_[s].begin());
+      };
+      std::vector<std::size_t> shared;  // what each source's multipliers became
+      for (const SignSource& source : sign_sources_[s]) {
+        Multipliers signs_alone = source.multipliers;
+        signs_alone.row_points.clear();
+        signs_alone.row_weights.clear();
+        signs_alone.side_points.clear();
+        shared.push_back(add_multipliers(signs_alone, cell_of(source.phase_samples), proof));
+      }
+      const std::size_t no_signs = add_multipliers({}, first_cell, proof);
+      const Place place = source_.make(s)->place();
+      for (ClosedCell& closed : closed_[s]) {
         Certificate::Cell cell{place.swing_index, place.ctle_index, closed.phase_samples, {}};
-        auto tree = closed.trees.begin();
+        const bool own = closed.source == kOwnTrees;
+        if (!own) closed.trees.assign(num_roots, {TreeNode{}});
+        auto tree = closed.trees.cbegin();
+        const std::size_t before = proof.multipliers.size();
         add_trees(straddling, 0, tree, proof, cell);
+        if (!own) {
+          proof.multipliers.resize(before);
+          for (Certificate::Node& node : cell.nodes) {
+            node.multipliers =
+                closed.source == kNoSigns ? no_signs : shared[static_cast<std::size_t>(closed.source)];
+          }
+        }
         proof.cells.push_back(std::move(cell));
       }
     }
@@ -337,6 +406,7 @@ class Search {
   std::optional<std::chrono::steady_clock::time_point> deadline_;
   std::vector<OpenCell> open_;
   std::vector<std::vector<ClosedCell>> closed_;
+  std::vector<std::vector<SignSource>> sign_sources_;
   GlobalBest best_;
   double open_bound_v_ = kImpossible;
   std::int64_t num_tree_nodes_ = 0;

@@ -1,8 +1,11 @@
 #include "search/fir_space.hpp"
 
 #include <algorithm>
+#include <array>
 #include <cmath>
 #include <cstddef>
+#include <limits>
+#include <utility>
 
 namespace tapwright::search {
 namespace {
@@ -11,6 +14,8 @@ namespace {
 constexpr double kRounding = 1e-12;
 
 std::size_t at(int i) { return static_cast<std::size_t>(i); }
+
+long long nano(double value) { return std::llround(value * 1e9); }
 
 /// Whether rounding to integer multiples of 1e-9, as keeps_limits does, leaves the value as it is.
 bool is_whole_nano(double value) {
@@ -36,6 +41,10 @@ FirSpace::FirSpace(const FirLimits& limits, const std::optional<Eigen::VectorXd>
       knob.values = {knob.lo};
     } else if (tap.is_remainder) {
       remainder_ = i;
+      least_remainder_ = tap.min;
+      if (i == main_index_ && limits.min_main) {
+        least_remainder_ = std::max(least_remainder_, *limits.min_main);
+      }
       continue;
     } else {
       for (const Code& code : tap.codes) {
@@ -120,14 +129,45 @@ double FirSpace::reduce(const Box& box, std::span<const double> by_taps,
   return by_remainder * limits_.peak_limit;
 }
 
+double FirSpace::largest(const Box& box, std::span<const double> slopes, double constant) const {
+  // Every tap starts at its smallest magnitude; moving out uses up the sum and gains |slope|.
+  double budget = peak_limit_ + row_slack_ - least_remainder_;
+  double value = constant;
+  std::array<std::pair<double, double>, 16> ways;  // gain per unit, room
+  std::size_t num_ways = 0;
+  for (std::size_t i = 0; i < knobs_.size(); ++i) {
+    const double start = std::clamp(0.0, box.lo[i], box.hi[i]);
+    value += slopes[i] * start;
+    budget -= std::abs(start);
+    const double up = box.hi[i] - start;
+    const double down = start - box.lo[i];
+    const bool rising = slopes[i] > 0.0;
+    // Outward only: a box on one side of zero moves away from it or stays.
+    const double room = rising ? (box.hi[i] > 0.0 ? up : 0.0) : (box.lo[i] < 0.0 ? down : 0.0);
+    if (room <= 0.0) continue;
+    if (num_ways == ways.size()) return std::numeric_limits<double>::infinity();
+    std::size_t at_place = num_ways++;
+    const std::pair<double, double> way{std::abs(slopes[i]), room};
+    for (; at_place > 0 && ways[at_place - 1].first < way.first; --at_place) {
+      ways[at_place] = ways[at_place - 1];
+    }
+    ways[at_place] = way;
+  }
+  if (budget < -1e-9) return kImpossible;
+  for (std::size_t i = 0; i < num_ways && budget > 0.0; ++i) {
+    const double step = std::min(budget, ways[i].second);
+    value += ways[i].first * step;
+    budget -= step;
+  }
+  return value;
+}
+
 void FirSpace::add_rows(const Box& box, CuttingPlanes& planes) const {
   if (remainder_ < 0) return;
   const FirTap& tap = limits_.taps[at(remainder_)];
-  double least = tap.min;
-  if (remainder_ == main_index_ && limits_.min_main) least = std::max(least, *limits_.min_main);
   std::vector<double> g(at(planes.dim()), 0.0);
   for (int i = 0; i < num_free(); ++i) g[at(i)] = box.lo[at(i)] >= 0.0 ? 1.0 : -1.0;
-  planes.add_row(g, peak_limit_ - least + row_slack_);
+  planes.add_row(g, peak_limit_ - least_remainder_ + row_slack_);
   for (double& value : g) value = -value;
   planes.add_row(g, tap.max - peak_limit_ + row_slack_);
 }
@@ -145,9 +185,20 @@ bool FirSpace::separate(std::span<const double> x, CuttingPlanes& planes) const 
 
 bool FirSpace::allowed(std::span<const double> taps) const {
   if (is_fixed_) return true;
-  const Eigen::Map<const Eigen::VectorXd> values(taps.data(),
-                                                 static_cast<Eigen::Index>(taps.size()));
-  return keeps_limits(limits_, values);
+  const auto within = [&](int i) {
+    const FirTap& tap = limits_.taps[at(i)];
+    const long long value = nano(taps[at(i)]);
+    return value >= nano(tap.min) && value <= nano(tap.max) &&
+           (i != main_index_ || !limits_.min_main || value >= nano(*limits_.min_main));
+  };
+  double sum = 0.0;
+  for (const double value : taps) sum += std::abs(value);
+  if (nano(sum) > nano(limits_.peak_limit)) return false;
+  if (remainder_ >= 0 && !within(remainder_)) return false;
+  for (int i = 0; i < num_free(); ++i) {  // coded knobs hold nothing but what is allowed
+    if (knobs_[at(i)].values.empty() && !within(free_[at(i)])) return false;
+  }
+  return true;
 }
 
 }  // namespace tapwright::search

@@ -38,10 +38,15 @@ class FirSpace {
   void expand(std::span<const double> x, std::span<double> taps) const;
   /// Slopes by the free taps from slopes by all taps; returns what is added to the constant.
   double reduce(const Box& box, std::span<const double> by_taps, std::span<double> by_free) const;
+  /// Largest slopes x + constant over the box within the peak limit: a fractional knapsack, largest
+  /// slopes first. kImpossible if the box has nothing within the limit.
+  [[nodiscard]] double largest(const Box& box, std::span<const double> slopes,
+                               double constant) const;
   void add_rows(const Box& box, CuttingPlanes& planes) const;
   /// The peak limit as a row, if x breaks it.
   bool separate(std::span<const double> x, CuttingPlanes& planes) const;
-  /// Whether the taps, made of codes or real values, keep the limits.
+  /// keeps_limits() for taps that expand() made of the knobs' own codes and real values, which saves
+  /// looking the codes up.
   [[nodiscard]] bool allowed(std::span<const double> taps) const;
 
  private:
@@ -52,6 +57,7 @@ class FirSpace {
   std::vector<int> positions_;
   int main_index_ = 0;
   int remainder_ = -1;
+  double least_remainder_ = 0.0;
   bool is_fixed_ = false;
   bool is_empty_ = false;    ///< the least main tap leaves no code
   double row_slack_ = 0.0;   ///< keeps_limits rounds to 1e-9

@@ -64,6 +64,20 @@ class Problem {
   [[nodiscard]] virtual bool exact_is_all() const { return true; }
 };
 
+/// Where a proof of a bound comes from: the x at which the cuts were made, and their multipliers.
+struct Multipliers {
+  std::vector<std::vector<double>> points;
+  std::vector<double> weights;
+  std::vector<std::vector<double>> side_points;  ///< see Problem::side_point; one a point
+  std::vector<std::vector<double>> row_points;  ///< where rows beyond the FIR's limits were made
+  std::vector<double> row_weights;
+};
+
+/// The s_k of a bound, one a cursor of a cell's row.
+struct Signs {
+  std::vector<double> values;
+};
+
 /// A problem for each sampling instant of one swing and CTLE state. Keeps scratch space, so one a
 /// thread.
 class Cell : public Problem {
@@ -74,6 +88,15 @@ class Cell : public Problem {
   [[nodiscard]] virtual Settings settings(std::span<const double> x) = 0;
   /// No setting has a height above this; a few operations.
   [[nodiscard]] virtual double quick_bound() const = 0;
+
+  /// Whether the signs of one instant bound the next one too, for the price of one cut.
+  [[nodiscard]] virtual bool has_sign_bound() const { return false; }
+  /// The signs that multipliers found at the present instant stand for.
+  virtual void take_signs(const Multipliers&, Signs&) {}
+  /// No setting of the box has a larger height at the present instant. `a` is scratch, (num knobs).
+  virtual double sign_bound(const Box&, const Signs&, std::span<double> /*a*/) {
+    return std::numeric_limits<double>::infinity();
+  }
 };
 
 /// Heights are compared in steps of 1e-12 V, so that rounding doesn't decide between equals.

@@ -49,6 +49,32 @@ template <int kTaps>
   }
 }
 
+template <int kTaps>
+[[gnu::always_inline]] inline void run_weighted(const PaddedRow& row, const double* weights,
+                                                const int* positions, double* sums) {
+  const double* from[kTaps];
+  Lanes total[kTaps];
+#pragma GCC unroll 8
+  for (int i = 0; i < kTaps; ++i) {
+    from[i] = row.data - positions[i];
+    total[i] = Lanes{0.0, 0.0, 0.0, 0.0};
+  }
+  for (int k = 0; k < row.count; k += 4) {
+    Lanes weight;
+    std::memcpy(&weight, weights + k, sizeof(Lanes));
+#pragma GCC unroll 8
+    for (int i = 0; i < kTaps; ++i) {
+      Lanes p;
+      std::memcpy(&p, from[i] + k, sizeof(Lanes));
+      total[i] += weight * p;
+    }
+  }
+#pragma GCC unroll 8
+  for (int i = 0; i < kTaps; ++i) {
+    sums[i] = (total[i][0] + total[i][1]) + (total[i][2] + total[i][3]);
+  }
+}
+
 /// Any number of taps, at two passes over a buffer.
 void run_any(const PaddedRow& row, std::span<const double> taps, std::span<const int> positions,
              std::span<double> sums) {
@@ -77,7 +103,34 @@ TAPWRIGHT_CLONES void run_few(const PaddedRow& row, const double* taps, const in
   }
 }
 
+TAPWRIGHT_CLONES void run_few_weighted(const PaddedRow& row, const double* weights,
+                                       const int* positions, double* sums, std::size_t num_taps) {
+  switch (num_taps) {
+    case 1: return run_weighted<1>(row, weights, positions, sums);
+    case 2: return run_weighted<2>(row, weights, positions, sums);
+    case 3: return run_weighted<3>(row, weights, positions, sums);
+    case 4: return run_weighted<4>(row, weights, positions, sums);
+    case 5: return run_weighted<5>(row, weights, positions, sums);
+    case 6: return run_weighted<6>(row, weights, positions, sums);
+    case 7: return run_weighted<7>(row, weights, positions, sums);
+    default: return run_weighted<8>(row, weights, positions, sums);
+  }
+}
+
 }  // namespace
+
+void weighted_sums(const PaddedRow& row, std::span<const double> weights,
+                   std::span<const int> positions, std::span<double> sums) {
+  if (positions.size() <= 8) {
+    return run_few_weighted(row, weights.data(), positions.data(), sums.data(), positions.size());
+  }
+  for (std::size_t i = 0; i < positions.size(); ++i) {
+    sums[i] = 0.0;
+    for (int k = 0; k < row.count; ++k) {
+      sums[i] += weights[static_cast<std::size_t>(k)] * row.data[k - positions[i]];
+    }
+  }
+}
 
 void sign_sums(const PaddedRow& row, std::span<const double> taps, std::span<const int> positions,
                std::span<double> sums) {

@@ -25,4 +25,10 @@ struct PaddedRow {
 void sign_sums(const PaddedRow& row, std::span<const double> taps, std::span<const int> positions,
                std::span<double> sums);
 
+/// sums_i = sum over k of weights_k p_{k - i}.
+///
+/// Shape:  weights is (row.count), entry k for output cursor first_k + k.
+void weighted_sums(const PaddedRow& row, std::span<const double> weights,
+                   std::span<const int> positions, std::span<double> sums);
+
 }  // namespace tapwright::search

@@ -1,6 +1,7 @@
 #include "search/tree.hpp"
 
 #include <algorithm>
+#include <cassert>
 #include <cmath>
 #include <cstddef>
 #include <queue>
@@ -69,24 +70,44 @@ Relaxer::Relaxer(Problem& problem)
 /// The cut that the problem just gave in a_ and b, made at x.
 void Relaxer::add_cut(std::span<const double> x, double b) {
   planes_.add_cut(a_, b);
-  points_.resize(at(planes_.num_rows()));
-  points_.back().assign(x.begin(), x.end());
-  side_points_.resize(points_.size());
-  side_points_.back() = problem_->side_point();
+  note_origins(Origin::kCut);
+  std::copy(x.begin(), x.end(), points_.end() - static_cast<std::ptrdiff_t>(x.size()));
+  std::vector<double> side = problem_->side_point();
+  if (!side.empty()) {
+    side_points_.resize(origins_.size());
+    side_points_.back() = std::move(side);
+  }
   cuts_.insert(cuts_.end(), a_.begin(), a_.end());
   cuts_.push_back(b);
   ++num_cuts_;
 }
 
+/// Rows that came since the last call: made at point_, or the FIR's own limits.
+void Relaxer::note_origins(Origin origin) {
+  const std::size_t dim = point_.size();
+  while (static_cast<int>(origins_.size()) < planes_.num_rows()) {
+    origins_.push_back(origin);
+    points_.insert(points_.end(), point_.begin(), point_.end());
+  }
+  assert(points_.size() == origins_.size() * dim);
+  static_cast<void>(dim);
+}
+
+std::vector<double> Relaxer::point_of(int row) const {
+  const auto dim = static_cast<std::ptrdiff_t>(point_.size());
+  const auto from = points_.begin() + row * dim;
+  return {from, from + dim};
+}
+
 void Relaxer::reset(const Box& root, std::span<const double> start) {
   planes_.clear();
   points_.clear();
+  origins_.clear();
   side_points_.clear();
   cuts_.clear();
   planes_.set_box(root.lo, root.hi);
   problem_->add_rows(root, planes_);
-  points_.resize(at(planes_.num_rows()));
-  side_points_.resize(points_.size());
+  note_origins(Origin::kLimits);
   for (std::size_t i = 0; i < point_.size(); ++i) {
     point_[i] = std::clamp(start[i], root.lo[i], root.hi[i]);
   }
@@ -110,11 +131,7 @@ Relaxation Relaxer::relax(const Box& box, double stop_below_v, const CuttingPlan
     std::copy(planes_.x().begin(), planes_.x().end(), point_.begin());
     const auto separated = [&](bool thorough) {
       if (!problem_->separate(box, point_, planes_, thorough)) return false;
-      if (planes_.num_rows() > static_cast<int>(points_.size())) {
-        points_.resize(at(planes_.num_rows()));
-        side_points_.resize(points_.size());
-        if (thorough) points_.back() = point_;
-      }
+      note_origins(thorough ? Origin::kInput : Origin::kLimits);
       return true;
     };
     if (separated(false)) continue;
@@ -150,11 +167,12 @@ Multipliers Relaxer::multipliers() const {
     const double weight = planes_.multiplier(row);
     if (weight <= 0.0) continue;
     if (planes_.is_cut(row)) {
-      result.points.push_back(points_[at(row)]);
-      result.side_points.push_back(side_points_[at(row)]);
+      result.points.push_back(point_of(row));
+      const bool has_side = at(row) < side_points_.size();
+      result.side_points.push_back(has_side ? side_points_[at(row)] : std::vector<double>());
       result.weights.push_back(weight);
-    } else if (!points_[at(row)].empty()) {
-      result.row_points.push_back(points_[at(row)]);
+    } else if (origins_[at(row)] == Origin::kInput) {
+      result.row_points.push_back(point_of(row));
       result.row_weights.push_back(weight);
     }
   }
@@ -165,8 +183,8 @@ Multipliers Relaxer::contradiction() const {
   Multipliers result;
   for (int row = 0; row < planes_.num_rows(); ++row) {
     const double weight = planes_.contradiction(row);
-    if (weight <= 0.0 || planes_.is_cut(row) || points_[at(row)].empty()) continue;
-    result.row_points.push_back(points_[at(row)]);
+    if (weight <= 0.0 || origins_[at(row)] != Origin::kInput) continue;
+    result.row_points.push_back(point_of(row));
     result.row_weights.push_back(weight);
   }
   return result;

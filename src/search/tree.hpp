@@ -34,15 +34,6 @@ class Best {
   std::vector<Found> ties_;
 };
 
-/// Where a proof of a bound comes from: the x at which the cuts were made, and their multipliers.
-struct Multipliers {
-  std::vector<std::vector<double>> points;
-  std::vector<double> weights;
-  std::vector<std::vector<double>> side_points;  ///< see Problem::side_point; one a point
-  std::vector<std::vector<double>> row_points;  ///< where rows beyond the FIR's limits were made
-  std::vector<double> row_weights;
-};
-
 /// The relaxation of one box.
 struct Relaxation {
   enum class Status {
@@ -78,9 +69,12 @@ class Relaxer {
   CuttingPlanes planes_;
   std::vector<double> a_;
   std::vector<double> point_;
-  /// Where each row was made; empty for the FIR's own limits.
-  std::vector<std::vector<double>> points_;
-  std::vector<std::vector<double>> side_points_;
+  enum class Origin : unsigned char { kLimits, kInput, kCut };
+  void note_origins(Origin origin);
+  [[nodiscard]] std::vector<double> point_of(int row) const;
+  std::vector<Origin> origins_;  ///< of each row
+  std::vector<double> points_;   ///< where each row was made, dim numbers a row
+  std::vector<std::vector<double>> side_points_;  ///< empty unless the problem has any
   std::vector<double> cuts_;  ///< dim slopes and a constant each, for bound_at
   std::int64_t num_cuts_ = 0;
 };

@@ -39,8 +39,21 @@ StateRows::StateRows(const PulseResponse& pulse)
       size_(pulse.size()),
       samples_(at(per_ui_ * per_phase_), 0.0) {
   const double* from = pulse.samples_v().data();
-  for (Eigen::Index i = 0; i < size_; ++i) {
-    samples_[at(i % per_ui_ * per_phase_ + i / per_ui_)] = from[i];
+  constexpr Eigen::Index kBlock = 8;  // UI at a time, so that lines of both sides stay in the cache
+  for (Eigen::Index first = 0; first < per_phase_; first += kBlock) {
+    const Eigen::Index last = std::min(first + kBlock, per_phase_);
+    const bool whole = last * per_ui_ <= size_;
+    for (Eigen::Index phase = 0; phase < per_ui_; ++phase) {
+      double* to = samples_.data() + phase * per_phase_;
+      if (whole) {
+        for (Eigen::Index ui = first; ui < last; ++ui) to[ui] = from[ui * per_ui_ + phase];
+      } else {
+        for (Eigen::Index ui = first; ui < last; ++ui) {
+          const Eigen::Index i = ui * per_ui_ + phase;
+          if (i < size_) to[ui] = from[i];
+        }
+      }
+    }
   }
 }
 
@@ -122,7 +135,7 @@ void WorstCaseCell::move_to(Eigen::Index phase_samples) {
   const Eigen::Index sample = state_->peak_index_ + phase_samples;
   // Entry `last` of the buffer is output cursor -pre + first; cursor -pre of the pulse stands at
   // last - first.
-  buffer_.assign(at(last - first + count), 0.0);
+  buffer_.resize(at(last - first + count));  // zeros; the window below is always the same
   state_->rows_->copy(sample, pre, post, buffer_.data() + last - first);
   row_ = {buffer_.data() + last, -pre + first, count};
   if (state_->dual_dirac_ui_ == 0.0 && state_->random_factor_ == 0.0) return;
@@ -344,6 +357,54 @@ Settings WorstCaseCell::settings(std::span<const double> x) {
                   amplitude_v * tap_product(row_, 0));
   }
   return settings;
+}
+
+bool WorstCaseCell::has_sign_bound() const {
+  return state_->dual_dirac_ui_ == 0.0 && state_->random_factor_ == 0.0 &&
+         state_->transmitter_ratio_ == 0.0;
+}
+
+void WorstCaseCell::take_signs(const Multipliers& from, Signs& signs) {
+  signs.values.assign(at(row_.count), 0.0);
+  for (std::size_t j = 0; j < from.points.size(); ++j) {
+    state_->space_->expand(from.points[j], taps_);
+    const double weight = from.weights[j];
+    for (int k = 0; k < row_.count; ++k) {
+      signs.values[at(k)] += tap_product(row_, row_.first_k + k) < 0.0 ? -weight : weight;
+    }
+    for (const WorstCaseState::Dfe& dfe : state_->dfe_) {
+      const int k = dfe.position - row_.first_k;
+      if (k < 0 || k >= row_.count) continue;
+      const double q = tap_product(row_, dfe.position);
+      const double limit = dfe.relative ? dfe.limit * tap_product(row_, 0) : dfe.limit;
+      if (std::abs(q) <= limit) signs.values[at(k)] -= q < 0.0 ? -weight : weight;
+    }
+  }
+  for (double& value : signs.values) value = std::clamp(value, -1.0, 1.0);
+  signs.values[at(-row_.first_k)] = 0.0;
+}
+
+double WorstCaseCell::sign_bound(const Box& box, const Signs& signs, std::span<double> a) {
+  const std::vector<int>& positions = state_->space_->positions();
+  weighted_sums(row_, signs.values, positions, by_taps_);
+  double constant = -state_->quantile_ * state_->noise_v_ - state_->sensitivity_v_;
+  double by_main = state_->share_;
+  for (const WorstCaseState::Dfe& dfe : state_->dfe_) {
+    const int k = dfe.position - row_.first_k;
+    if (k < 0 || k >= row_.count) continue;
+    const double worth = dfe.limit * std::abs(signs.values[at(k)]);
+    if (dfe.relative) {
+      by_main += worth;
+    } else {
+      constant += worth;
+    }
+  }
+  for (std::size_t i = 0; i < by_taps_.size(); ++i) {
+    by_taps_[i] = by_main * row_.at(0, positions[i]) - by_taps_[i];
+  }
+  constant += state_->space_->reduce(box, by_taps_, a);
+  const double largest = state_->space_->largest(box, a, constant);
+  return state_->scale_ * largest;
 }
 
 double WorstCaseCell::quick_bound() const {

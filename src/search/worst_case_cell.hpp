@@ -102,6 +102,9 @@ class WorstCaseCell final : public Cell {
   /// The DFE is the nearest allowed to each cursor.
   [[nodiscard]] Settings settings(std::span<const double> x) override;
   [[nodiscard]] double quick_bound() const override;
+  [[nodiscard]] bool has_sign_bound() const override;
+  void take_signs(const Multipliers& from, Signs& signs) override;
+  double sign_bound(const Box& box, const Signs& signs, std::span<double> a) override;
 
  private:
   /// Half eye at 1 V launch without crosstalk at taps_, and its slopes by all taps.
