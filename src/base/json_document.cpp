@@ -311,7 +311,8 @@ class Checker {
                                                     "title",
                                                     "type",
                                                     "unit",
-                                                    "vary"};
+                                                    "vary",
+                                                    "vary_step"};
     for (const auto& [keyword, unused] : schema.items()) {
       if (!std::binary_search(kKnown.begin(), kKnown.end(), keyword)) {
         throw std::invalid_argument("schema keyword \"" + keyword + "\" is not understood");

@@ -259,7 +259,7 @@ Result<Network> without_fixture(const Network& measured, const std::optional<Net
   const auto brought = [&](const Network& network) {
     Eigen::VectorXcd reference = Eigen::VectorXcd::Constant(n, measured.reference_ohm[0].real());
     Network same = network.reference_ohm == reference ? network : renormalised(network, reference);
-    return same.frequencies_hz == grid ? same : resampled(same, grid);
+    return is_same_grid(same.frequencies_hz, grid) ? same : resampled(same, grid);
   };
   Network inner = brought(measured);
   const Index half_ports = n / 2;

@@ -215,7 +215,7 @@ Network with_ports(const Network& network, const std::vector<int>& ports) {
 
 Network resampled(const Network& network, const VectorXd& frequencies_hz) {
   const VectorXd& x = network.frequencies_hz;
-  if (x == frequencies_hz) return network;
+  if (is_same_grid(x, frequencies_hz)) return network;
   if (frequencies_hz.size() == 0 || x.size() < 2 || frequencies_hz[0] < x[0] ||
       frequencies_hz[frequencies_hz.size() - 1] > x[x.size() - 1]) {
     throw std::invalid_argument("resampled: the new grid leaves the range of the old one");
@@ -262,7 +262,7 @@ Result<Network> cascade(const std::vector<Network>& networks, std::string_view l
   double low = networks[0].frequencies_hz[0];
   double high = networks[0].frequencies_hz[networks[0].num_points() - 1];
   for (const Network& network : networks) {
-    same_grid = same_grid && network.frequencies_hz == networks[0].frequencies_hz;
+    same_grid = same_grid && is_same_grid(network.frequencies_hz, networks[0].frequencies_hz);
     low = std::max(low, network.frequencies_hz[0]);
     high = std::min(high, network.frequencies_hz[network.num_points() - 1]);
   }

@@ -2,10 +2,14 @@
 
 #include <algorithm>
 #include <cmath>
+#include <complex>
 #include <functional>
 #include <limits>
 #include <map>
+#include <numbers>
 
+#include "link/link_cache.hpp"
+#include "tapwright/base/digest.hpp"
 #include "tapwright/base/fft.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
@@ -20,6 +24,8 @@
 
 namespace tapwright {
 namespace {
+
+using std::numbers::pi;
 
 constexpr double kReferenceOhm = 100.0;  ///< of modelled pieces, differential
 
@@ -156,13 +162,27 @@ struct Piece {
   double delay_s = 0.0;  ///< of a modelled piece
 };
 
+std::shared_ptr<const Network> read_network_file(const Section& name, InputFiles& files) {
+  const std::optional<std::string> text = files.read(name);
+  if (!text) return nullptr;
+  const std::string path = files.resolved(name.text());
+  const std::string key = files.used().back().sha256 + " " + path;
+  if (files.cache() != nullptr) {
+    if (auto known = files.cache()->networks.find(key)) return known;
+  }
+  Result<Network> parsed = parse_touchstone(*text, path);
+  adopt_here(name, parsed.notes);
+  if (!parsed) return nullptr;
+  auto network = std::make_shared<const Network>(std::move(*parsed.value));
+  // A file with warnings is read again, so that they are told again.
+  if (files.cache() != nullptr && parsed.notes.empty()) files.cache()->networks.keep(key, network);
+  return network;
+}
+
 /// The two-port that a Touchstone file holds between the ports of its map.
 std::optional<Network> read_path(const Section& section, bool may_guess, InputFiles& files) {
   const Section name = section.at("file");
-  const std::optional<std::string> text = files.read(name);
-  if (!text) return std::nullopt;
-  const std::optional<Network> network =
-      value_or_notes(name, parse_touchstone(*text, files.resolved(name.text())));
+  const std::shared_ptr<const Network> network = read_network_file(name, files);
   if (!network) return std::nullopt;
   PortMap map{{1}, {2}};
   if (section.has("ports")) {
@@ -189,6 +209,28 @@ std::optional<Network> read_path(const Section& section, bool may_guess, InputFi
   return value_or_notes(section, through_path(*network, map, ""));
 }
 
+/// The two-port with its transmission to the power of `stretch` (magnitude and unwrapped phase,
+/// counted from the multiple of pi at DC) and with loss added: what a sensitivity study may ask of
+/// a measured channel. Reflections stay.
+Network varied(Network two_port, double stretch, double skin_db, double dielectric_db) {
+  if (stretch == 1.0 && skin_db == 0.0 && dielectric_db == 0.0) return two_port;
+  const Eigen::VectorXd& f = two_port.frequencies_hz;
+  for (const auto& [to, from] : {std::pair(1, 0), std::pair(0, 1)}) {
+    double phase = 0.0;
+    double base = 0.0;
+    for (Eigen::Index k = 0; k < two_port.num_points(); ++k) {
+      std::complex<double>& s = two_port.at(k)(to, from);
+      const double before = std::arg(k == 0 ? s : std::polar(1.0, phase));
+      phase = k == 0 ? before : phase + std::remainder(std::arg(s) - before, 2 * pi);
+      if (k == 0) base = std::abs(before) > pi / 2 ? std::copysign(pi, before) : 0.0;
+      const double loss_db = skin_db * std::sqrt(f[k] / 1e9) + dielectric_db * f[k] / 1e9;
+      s = std::polar(std::pow(std::abs(s), stretch) * amplitude_db_to_ratio(-loss_db),
+                     base + stretch * (phase - base));
+    }
+  }
+  return two_port;
+}
+
 std::optional<Piece> read_touchstone(const Section& section, bool is_victim, InputFiles& files) {
   std::optional<Network> path = read_path(section, is_victim, files);
   if (!path) return std::nullopt;
@@ -204,7 +246,11 @@ std::optional<Piece> read_touchstone(const Section& section, bool is_victim, Inp
     path = value_or_notes(section, without_fixture(*path, halves[0], halves[1], ""));
     if (!path) return std::nullopt;
   }
-  return Piece{std::move(path), {}, 0.0};
+  return Piece{
+      varied(std::move(*path), section.number("stretch"), section.number("extra_skin_loss_db"),
+             section.number("extra_dielectric_loss_db")),
+      {},
+      0.0};
 }
 
 PhysicalLine read_dimensions(const Section& line) {
@@ -386,8 +432,9 @@ std::optional<Network> joined(const Section& section, std::vector<Piece> pieces,
     const Eigen::VectorXd finest_hz = finest == nullptr ? frequencies_hz : finest->frequencies_hz;
     for (Piece& piece : pieces) {
       // Files on one grid follow it quietly when it is made finer; of others cascade() tells.
-      const bool follows = piece.measured && piece.measured->frequencies_hz == finest_hz &&
-                           finest_hz != frequencies_hz;
+      const bool follows = piece.measured &&
+                           is_same_grid(piece.measured->frequencies_hz, finest_hz) &&
+                           !is_same_grid(finest_hz, frequencies_hz);
       networks.push_back(!piece.measured ? piece.modelled(frequencies_hz)
                          : follows       ? resampled(*piece.measured, frequencies_hz)
                                          : std::move(*piece.measured));
@@ -444,15 +491,58 @@ std::optional<int> samples_per_ui_of(const Section& channel) {
   return channel.at("pulse").integer("samples_per_ui");
 }
 
+namespace {
+
+std::optional<ReceivedSpectrum> compute_channel(const Section& channel,
+                                                const PulseConditions& conditions,
+                                                InputFiles& files) {
+  if (channel.has("pulse")) return read_pulse(channel.at("pulse"), conditions.grid);
+  if (channel.has("pulse_csv") || channel.has("step_csv") || channel.has("waveform_csv")) {
+    return read_capture_of(channel, conditions.grid, files);
+  }
+  return read_network(channel, conditions, files);
+}
+
+/// Everything that a channel's pulse and its notes depend on, but for the files that it names.
+std::string key_of(const Section& channel, const PulseConditions& conditions) {
+  std::string text = channel.value().dump() + " " + to_string(channel.warning_here("")) + " " +
+                     std::to_string(conditions.grid.samples_per_ui) + " " +
+                     std::to_string(conditions.grid.min_num_ui) +
+                     (conditions.is_victim ? " victim" : " aggressor");
+  for (const std::optional<double> number :
+       {std::optional(conditions.grid.ui_s), conditions.launch.rise_time_s,
+        conditions.launch.high_pass_hz, conditions.source_ohm, std::optional(conditions.source_f),
+        conditions.load_ohm, std::optional(conditions.load_f)}) {
+    text += number ? " " + exact(*number) : " none";
+  }
+  return sha256_hex(text);
+}
+
+}  // namespace
+
 std::optional<ReceivedSpectrum> read_channel(const Section& channel,
                                              const PulseConditions& conditions, InputFiles& files) {
-  const bool is_capture =
-      channel.has("pulse_csv") || channel.has("step_csv") || channel.has("waveform_csv");
-  std::optional<ReceivedSpectrum> spectrum =
-      channel.has("pulse") ? read_pulse(channel.at("pulse"), conditions.grid)
-      : is_capture         ? read_capture_of(channel, conditions.grid, files)
-                           : read_network(channel, conditions, files);
-  return channel.failed() ? std::nullopt : std::move(spectrum);
+  if (files.cache() == nullptr) {
+    std::optional<ReceivedSpectrum> spectrum = compute_channel(channel, conditions, files);
+    return channel.failed() ? std::nullopt : std::move(spectrum);
+  }
+  const std::string key = key_of(channel, conditions);
+  if (const auto known = files.cache()->channels.find(key)) {
+    if (files.are_unchanged(known->files)) {
+      channel.adopt(known->notes);
+      return known->spectrum;
+    }
+  }
+  InputFiles own = files.fresh();
+  const std::size_t num_notes = channel.notes().size();
+  std::optional<ReceivedSpectrum> spectrum = compute_channel(channel, conditions, own);
+  for (const InputFile& file : own.used()) files.add(file);
+  if (channel.failed() || !spectrum) return std::nullopt;
+  const std::vector<Diagnostic> notes(channel.notes().begin() + static_cast<long>(num_notes),
+                                      channel.notes().end());
+  files.cache()->channels.keep(
+      key, std::make_shared<const KnownChannel>(KnownChannel{*spectrum, own.used(), notes}));
+  return spectrum;
 }
 
 ReceivedSpectrum lengthened(ReceivedSpectrum spectrum, Eigen::Index num_samples) {

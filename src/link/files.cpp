@@ -11,6 +11,21 @@ std::string InputFiles::resolved(const std::string& name) const {
   return (std::filesystem::path(base_) / std::filesystem::path(name)).string();
 }
 
+InputFiles InputFiles::fresh() const {
+  InputFiles other = *this;
+  other.used_.clear();
+  return other;
+}
+
+bool InputFiles::are_unchanged(const std::vector<InputFile>& files) {
+  for (const InputFile& file : files) {
+    const Result<TextFile> now = read_text_file(file.path);
+    if (!now || now.value->sha256 != file.sha256) return false;
+  }
+  for (const InputFile& file : files) add(file);
+  return true;
+}
+
 void InputFiles::add(InputFile file) {
   const bool known = std::any_of(used_.begin(), used_.end(),
                                  [&](const InputFile& one) { return one.path == file.path; });

@@ -4,12 +4,15 @@
 #include <cmath>
 #include <filesystem>
 #include <map>
+#include <memory>
+#include <numbers>
 #include <tuple>
 
 #include "link/channel_reader.hpp"
 #include "link/device_reader.hpp"
 #include "link/embedded_text.hpp"
 #include "link/files.hpp"
+#include "link/link_cache.hpp"
 #include "link/section.hpp"
 #include "tapwright/base/digest.hpp"
 #include "tapwright/base/fft.hpp"
@@ -297,8 +300,12 @@ void read_channels(const Section& root, Link& link, InputFiles& files) {
   }
   if (const auto ps = transmitter.maybe("rise_time_ps"))
     conditions.launch.rise_time_s = ps_to_s(*ps);
-  if (const auto mhz = receiver.maybe("high_pass_mhz")) link.high_pass_hz = *mhz * 1e6;
-  conditions.launch.high_pass_hz = link.high_pass_hz;
+  if (const auto mhz = receiver.maybe("high_pass_mhz")) {
+    link.high_pass_hz = *mhz * 1e6;
+    // The tail of a lower corner is under 0.1 % a UI and would need a record of thousands of UI.
+    const double tail_per_ui = 2.0 * std::numbers::pi * *link.high_pass_hz * link.signal.ui_s();
+    if (tail_per_ui >= 1e-3) conditions.launch.high_pass_hz = link.high_pass_hz;
+  }
   conditions.source_ohm = transmitter.maybe("impedance_ohm");
   conditions.source_f = pf_to_f(transmitter.number("capacitance_pf"));
   conditions.load_ohm = receiver.maybe("impedance_ohm");
@@ -427,9 +434,14 @@ void put_in_order(Notes& notes, const std::string& file) {
 
 }  // namespace
 
+LinkCache::LinkCache(std::size_t max_records) : kept_(std::make_unique<Kept>(max_records)) {}
+
+LinkCache::~LinkCache() = default;
+
 Result<Link> parse_link(std::string_view text, const std::string& file_name,
-                        const std::string& base_directory, const std::vector<LinkChange>& changes) {
-  InputFiles files(base_directory);
+                        const std::string& base_directory, const std::vector<LinkChange>& changes,
+                        LinkCache* cache) {
+  InputFiles files(base_directory, cache);
   files.add({file_name, sha256_hex(text)});
   Result<JsonDocument> document = checked_document(text, file_name, changes, files);
   if (!document) return {std::nullopt, std::move(document.notes)};
@@ -442,11 +454,12 @@ Result<Link> parse_link(std::string_view text, const std::string& file_name,
   return {std::move(link), std::move(notes)};
 }
 
-Result<Link> read_link(const std::string& path, const std::vector<LinkChange>& changes) {
+Result<Link> read_link(const std::string& path, const std::vector<LinkChange>& changes,
+                       LinkCache* cache) {
   Result<TextFile> file = read_text_file(path, JsonLimits{}.max_bytes);
   if (!file) return {std::nullopt, std::move(file.notes)};
   return parse_link(file.value->text, path, std::filesystem::path(path).parent_path().string(),
-                    changes);
+                    changes, cache);
 }
 
 Result<std::vector<LinkNumber>> numbers_in_link(std::string_view text, const std::string& file_name,
@@ -455,10 +468,11 @@ Result<std::vector<LinkNumber>> numbers_in_link(std::string_view text, const std
   std::vector<LinkNumber> numbers;
   const auto take = [&](const std::string& path, const json& value, const json& found) {
     if (!value.is_number() || !found.value("vary", false)) return;
-    numbers.push_back(
-        {path, value.get<double>(), found.value("unit", ""), found.value("title", "")});
+    const auto number = value.get<double>();
+    numbers.push_back({path, number, found.value("unit", ""), found.value("title", ""),
+                       found.value("vary_step", 0.05 * std::abs(number))});
   };
-  InputFiles files(base_directory);
+  InputFiles files(base_directory, nullptr);
   Result<JsonDocument> document = checked_document(text, file_name, changes, files, take);
   if (!document) return {std::nullopt, std::move(document.notes)};
   return {std::move(numbers), std::move(document.notes)};

@@ -58,6 +58,11 @@ class Section {
   void adopt(std::vector<Diagnostic> others) const {
     for (Diagnostic& note : others) add(std::move(note));
   }
+  /// A warning at this place, made but not added.
+  [[nodiscard]] Diagnostic warning_here(const std::string& message) const {
+    return document_->warning(path_, message);
+  }
+  [[nodiscard]] const std::vector<Diagnostic>& notes() const { return *notes_; }
   [[nodiscard]] bool failed() const { return has_error(*notes_); }
 
  private:

@@ -198,6 +198,33 @@ TEST(ChannelReader, AFixtureHalfIsTakenOut) {
   EXPECT_LT(difference(rest, taken_out), 1e-9);
 }
 
+TEST(ChannelReader, AMeasuredLineCanBeStretchedAndMadeLossier) {
+  const Folder folder;
+  // A matched line, loss by a square-root and a linear law: stretching its transmission is a longer
+  // line, adding 0.1 dB and 0.3 dB at 1 GHz a lossier one.
+  const Eigen::VectorXd f = Eigen::VectorXd::LinSpaced(2501, 0.0, 25e9);
+  const auto write = [&](const std::string& name, double skin_db, double linear_db,
+                         double length_m) {
+    const DatasheetLine sheet{
+        {{1e9, skin_db + linear_db}, {4e9, 2 * skin_db + 4 * linear_db}}, 4.6e-9, 100.0};
+    folder.write(name, write_touchstone(line_network(sheet, length_m, f, 100.0)));
+  };
+  write("short.s2p", 0.8, 0.2, 1.0);
+  write("long.s2p", 0.8, 0.2, 1.5);
+  write("lossy.s2p", 0.9, 0.5, 1.0);
+  const auto p = [&](const std::string& file) {
+    return record(with_channel("{\"touchstone\": {\"file\": " + file + "}}", folder.path()));
+  };
+  // Rounding; the loss's own dispersion (the annex ties phase to loss) does not follow an added
+  // loss, so that the lossier line differs by that much: a few parts in a thousand.
+  EXPECT_LT(difference(p(R"("short.s2p", "stretch": 1.5)"), p("\"long.s2p\"")), 1e-9);
+  EXPECT_NEAR(p(R"("short.s2p", "extra_skin_loss_db": 0.1, "extra_dielectric_loss_db": 0.3)").sum(),
+              p("\"lossy.s2p\"").sum(), 0.05);
+  EXPECT_NEAR(
+      p(R"("short.s2p", "extra_skin_loss_db": 0.1, "extra_dielectric_loss_db": 0.3)").maxCoeff(),
+      p("\"lossy.s2p\"").maxCoeff(), 0.02);
+}
+
 TEST(ChannelReader, PortsOfAFourPortFileAreFoundAndTold) {
   const Folder folder;
   const Network line = line_network(DatasheetLine{{{1e9, 2.0}, {5e9, 6.0}}, 6e-9, 50.0}, 0.3,
@@ -220,6 +247,43 @@ TEST(ChannelReader, PortsOfAFourPortFileAreFoundAndTold) {
   EXPECT_EQ(found.notes.size(), 1U);  // what was taken
   EXPECT_EQ(real_record(found.value->channel.values, found.value->channel.num_samples),
             record(given));
+}
+
+TEST(LinkCache, ChangesNoResultAndNoticesAFileThatChanged) {
+  const Folder folder;
+  const DatasheetLine sheet{{{1e9, 0.9}, {3.125e9, 1.75}}, 4.6e-9, 95.0};
+  const auto write = [&](double length_m) {
+    folder.write("l.s2p",
+                 write_touchstone(line_network(
+                     sheet, length_m, Eigen::VectorXd::LinSpaced(1501, 0.0, 15e9), 100.0)));
+  };
+  const std::string text = R"({"format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 6.25},
+      "channel": {"touchstone": {"file": "l.s2p"}}})";
+  const auto read = [&](LinkCache* cache, const std::vector<LinkChange>& changes) {
+    return parse_link(text, "link.json", folder.path(), changes, cache);
+  };
+  LinkCache cache(2);
+  const std::vector<std::vector<LinkChange>> variants = {{},
+                                                         {{"jitter.random_ui", "0.02"}},
+                                                         {{"transmitter.rise_time_ps", "40"}},
+                                                         {{"channel.touchstone.repeat", "3"}},
+                                                         {},
+                                                         {{"receiver.impedance_ohm", "90"}},
+                                                         {}};
+  for (const double length_m : {0.5, 0.7}) {
+    write(length_m);
+    for (const auto& changes : variants) {
+      const Result<Link> with = read(&cache, changes);
+      const Result<Link> without = read(nullptr, changes);
+      ASSERT_TRUE(with && without);
+      EXPECT_EQ(with.value->channel.values, without.value->channel.values);
+      EXPECT_EQ(with.notes, without.notes);
+      ASSERT_EQ(with.value->inputs.size(), 2U);
+      EXPECT_EQ(with.value->inputs[1].sha256, without.value->inputs[1].sha256);
+    }
+  }
+  std::filesystem::remove(folder.path() + "/l.s2p");
+  EXPECT_FALSE(read(&cache, {}));
 }
 
 /// A pulse of 8 UI at 6.25 GBd, 0 at both ends, at time t_s.

@@ -32,6 +32,11 @@ struct Network {
   }
 };
 
+/// Whether two lists of frequencies are the same, entry by entry. Eigen's == asks for equal sizes.
+[[nodiscard]] inline bool is_same_grid(const Eigen::VectorXd& a, const Eigen::VectorXd& b) {
+  return a.size() == b.size() && a == b;
+}
+
 /// A network of the given grid and equal references with S = 0 everywhere.
 [[nodiscard]] inline Network empty_network(const Eigen::VectorXd& frequencies_hz,
                                            const Eigen::VectorXcd& reference_ohm) {

@@ -92,7 +92,8 @@ struct Link {
   ObjectiveKind objective = ObjectiveKind::kWorstCase;
   SamplingRule sampling = SamplingRule::kBest;
   double mask_width_ui = 0.0;
-  std::optional<double> high_pass_hz;  ///< AC coupling, already part of the pulses
+  /// AC coupling; part of the pulses where 2 pi f T >= 1e-3. Of a lower corner only the wander counts.
+  std::optional<double> high_pass_hz;
   std::vector<RegisterField> registers;
   std::vector<InputFile> inputs;
   std::vector<Diagnostic> warnings;  ///< what was assumed or looks odd in the input
