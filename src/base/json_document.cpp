@@ -260,7 +260,8 @@ class Checker {
     if (value.is_array()) check_list(value, schema, path);
     if (value.is_object()) check_object(value, schema, path);
     if (schema.contains("oneOf")) check_one_of(value, schema, path);
-    if (visit_ && !schema.contains("oneOf")) visit_(path, value, schema);
+    const bool is_choice = schema.contains("oneOf") && !is_groups(schema["oneOf"]);
+    if (visit_ && !is_choice) visit_(path, value, schema);
   }
 
   std::vector<Diagnostic> take() {

@@ -328,7 +328,15 @@ Result<LinearFit> fit_pulse(const Capture& waveform, const Pattern& pattern,
   const Spline spline(y.data(), static_cast<std::size_t>(y.size()), 0.0, 1.0);
   double per_ui = track.per_ui;
   constexpr int kCoarsePhases = 4;
+  // Moves the grid back into the record; false when it has become longer than that, which no rate
+  // near the one told makes it.
+  const auto keep_inside = [&] {
+    const double end = static_cast<double>(y.size() - 1);
+    start = std::max(std::min(start, end - per_ui * static_cast<double>(num_rows)), 0.0);
+    return start + per_ui * static_cast<double>(num_rows) <= end;
+  };
   for (int turn = 0; turn < 12; ++turn) {
+    if (!keep_inside()) return no_trace("");
     const Eigen::MatrixXd coarse = on_grid(spline, start, per_ui, num_rows, kCoarsePhases);
     const double error = rate_error(coarse, fitter.solve(coarse).residual);
     // Half a UI over the record is as far as a first-order step can be trusted.
@@ -337,13 +345,9 @@ Result<LinearFit> fit_pulse(const Capture& waveform, const Pattern& pattern,
     const double middle = 0.5 * static_cast<double>(num_rows);
     start += middle * per_ui * step;  // the middle of the record stays where it is
     per_ui *= 1 - step;
-    if (start < 0) start = 0;
     if (std::abs(step) * static_cast<double>(num_rows) < 1e-6) break;
   }
-  const double last = start + per_ui * static_cast<double>(num_rows);
-  if (last > static_cast<double>(y.size() - 1)) {
-    start -= last - static_cast<double>(y.size() - 1);
-  }
+  if (!keep_inside()) return no_trace("");
 
   const int m = options.samples_per_ui;
   const Eigen::MatrixXd fine = on_grid(spline, start, per_ui, num_rows, m);

@@ -4,9 +4,9 @@
 
 #include <cmath>
 #include <filesystem>
-#include <fstream>
 #include <numbers>
 
+#include "link/folder.hpp"
 #include "support/input_files.hpp"
 #include "support/measured_data.hpp"
 #include "tapwright/base/digest.hpp"
@@ -20,25 +20,7 @@
 namespace tapwright {
 namespace {
 
-/// A folder that goes away with the test.
-class Folder {
- public:
-  Folder() {
-    std::string name = (std::filesystem::temp_directory_path() / "tapwright_XXXXXX").string();
-    path_ = ::mkdtemp(name.data());
-  }
-  Folder(const Folder&) = delete;
-  Folder& operator=(const Folder&) = delete;
-  ~Folder() { std::filesystem::remove_all(path_); }
-  [[nodiscard]] std::string path() const { return path_.string(); }
-  void write(const std::string& name, const std::string& text) const {
-    std::filesystem::create_directories((path_ / name).parent_path());
-    std::ofstream(path_ / name, std::ios::binary) << text;
-  }
-
- private:
-  std::filesystem::path path_;
-};
+using test::Folder;
 
 Result<Link> with_channel(const std::string& channel, const std::string& folder = "",
                           const std::string& more = "") {
