@@ -2,6 +2,7 @@
 
 #include <algorithm>
 #include <cmath>
+#include <limits>
 #include <stdexcept>
 #include <string>
 
@@ -111,12 +112,19 @@ Disturbance disturbance_of(const PlacedEye& eye, const Instant& instant,
   return d;
 }
 
-namespace {}  // namespace
+Disturbance with_least_noise(Disturbance disturbance) {
+  const double variance_v2 =
+      symbol_variance(disturbance.levels) * disturbance.symbols_v.squaredNorm() +
+      disturbance.binary_v.squaredNorm();
+  disturbance.sigma_v = std::max(disturbance.sigma_v, 0.008 * std::sqrt(variance_v2));
+  return disturbance;
+}
 
 Tail::Tail(const PlacedEye& eye, const LineCode& code, const Instant& instant,
-           const Eigen::VectorXd& aggressors_v) {
+           const Eigen::VectorXd& aggressors_v, bool many_times) {
   if (code.independent()) {
     independent_ = disturbance_of(eye, instant, aggressors_v);
+    if (many_times) independent_ = with_least_noise(std::move(independent_));
     return;
   }
   // Without the cursors: what does not follow the code.
@@ -154,43 +162,70 @@ AtErrorRatio at_error_ratio(const PlacedEye& eye, const LineCode& code, Eigen::I
   }
 
   // Clock jitter moves signal and interference together: the error ratio is averaged over phase out
-  // to +-8 sigma, at most half a sigma apart (the trapezoid rule on a Gaussian is exact to 1e-17
-  // there), and the half height is where the average is P.
+  // to +-8 sigma, half a sigma apart (the trapezoid rule on a Gaussian is exact to 1e-17 there),
+  // and the half height h is where sum w_i P(X_i > s_i - h) = P.
   struct Node {
     double weight = 0.0;
     double signal_v = 0.0;
     Tail tail;
+    double at_high = 0.0;
   };
   constexpr double kReach = 8.0;
   constexpr int kPerSigma = 2;
   constexpr int kNumSide = static_cast<int>(kReach) * kPerSigma;
-  std::vector<Node> nodes;
   double total = 0.0;
   for (int i = -kNumSide; i <= kNumSide; ++i) {
-    const double sigmas = static_cast<double>(i) / kPerSigma;
-    const Instant there = instant_at(static_cast<double>(offset_samples) + sigmas * clock_samples);
-    const double weight = std::exp(-0.5 * sigmas * sigmas);
-    nodes.push_back({weight, there.signal_v, Tail(eye, code, there, aggressors_v)});
-    total += weight;
+    total += std::exp(-0.5 * i * i / (kPerSigma * kPerSigma));
   }
-  const auto error_ratio = [&](double half_v) {
+  std::vector<Node> nodes;
+  // No node alone may bring P, and one of them brings P over their number: a bracket.
+  constexpr int kNumNodes = 2 * kNumSide + 1;
+  double low = std::numeric_limits<double>::infinity();
+  double high = low;
+  for (int i = -kNumSide; i <= kNumSide; ++i) {
+    const double sigmas = static_cast<double>(i) / kPerSigma;
+    const double weight = std::exp(-0.5 * sigmas * sigmas) / total;
+    const Instant there = instant_at(static_cast<double>(offset_samples) + sigmas * clock_samples);
+    nodes.push_back({weight, there.signal_v, Tail(eye, code, there, aggressors_v, true)});
+    const auto clear_v = [&](double share) {
+      return there.signal_v - nodes.back().tail.exceeded_level_v(share);
+    };
+    // From 1/2 on the level is on the other side of the middle; a node that may always fail does
+    // not bound from above, and its own signal bounds from below.
+    if (probability / weight < 0.5) high = std::min(high, clear_v(probability / weight));
+    const double share = probability / (weight * kNumNodes);
+    low = std::min(low, share < 0.5 ? clear_v(share) : there.signal_v);
+  }
+  const auto error_ratio = [&](double at_v) {
     double sum = 0.0;
     for (Node& node : nodes) {
-      sum += node.weight / total * node.tail.exceedance(node.signal_v - half_v);
+      node.at_high = node.weight * node.tail.exceedance(node.signal_v - at_v);
+      sum += node.at_high;
     }
     return sum;
   };
-  double low = here.signal_v;
-  double high = low;
-  double width = std::max(1e-6, std::abs(here.signal_v));
-  while (error_ratio(low) > probability) low -= width *= 2.0;
-  width = std::max(1e-6, std::abs(here.signal_v));
-  while (error_ratio(high) <= probability) high += width *= 2.0;
-  while (high - low > 1e-8 + 1e-7 * std::abs(high)) {
-    const double middle = 0.5 * (low + high);
-    (error_ratio(middle) > probability ? high : low) = middle;
+  double log_high = std::log(error_ratio(high) / probability);
+  std::erase_if(nodes, [&](const Node& node) { return node.at_high < 1e-6 * probability; });
+  double log_low = std::log(error_ratio(low) / probability);
+  // Regula falsi on ln P, nearly straight; the end that stays is halved (Illinois).
+  double half_v = low;
+  for (int i = 0; i < 60 && high - low > 1e-9 + 1e-7 * std::abs(high); ++i) {
+    const double next = std::clamp(low - log_low * (high - low) / (log_high - log_low),
+                                   low + 0.01 * (high - low), high - 0.01 * (high - low));
+    const double log_next = std::log(error_ratio(next) / probability);
+    half_v = next;
+    if (std::abs(log_next) < 1e-6) break;
+    if (log_next > 0.0) {
+      high = next;
+      log_high = log_next;
+      log_low *= 0.5;
+    } else {
+      low = next;
+      log_low = log_next;
+      log_high *= 0.5;
+    }
   }
-  return {here.signal_v - low, 2.0 * (low - sensitivity_v)};
+  return {here.signal_v - half_v, 2.0 * (half_v - sensitivity_v)};
 }
 
 double worst_case_height_at(const PlacedEye& eye, const LineCode& code, const CursorMap& map,

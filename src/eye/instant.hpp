@@ -59,11 +59,17 @@ struct Instant {
 /// Samples on either side of t_s under the mask.
 [[nodiscard]] Eigen::Index mask_reach(const EyeModel& model);
 
-/// N(P) and P(X > x) of one instant: interference under the code, crosstalk, jitter, noise.
+/// The same with noise of at least 0.8 % of the whole deviation, for where many levels are asked
+/// for: contours then stay short, and levels move by theta (0.008 deviation)^2 / 2, some
+/// microvolts.
+[[nodiscard]] Disturbance with_least_noise(Disturbance disturbance);
+
+/// N(P) and P(X > x) of one instant: interference under the code, crosstalk, jitter, noise; asked
+/// many times, it takes `with_least_noise`.
 class Tail {
  public:
   Tail(const PlacedEye& eye, const LineCode& code, const Instant& instant,
-       const Eigen::VectorXd& aggressors_v);
+       const Eigen::VectorXd& aggressors_v, bool many_times = false);
   [[nodiscard]] double exceeded_level_v(double probability);
   [[nodiscard]] double exceedance(double level_v);
 

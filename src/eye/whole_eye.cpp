@@ -149,6 +149,36 @@ class PhaseDistribution {
   std::optional<GridDistribution> grid_;
 };
 
+/// X of one phase under a line code: levels at some probabilities, between them linear in the
+/// normal quantile, as a Gaussian is exactly. What is more likely than 0.3 is taken as of
+/// independent symbols: no eye is measured there.
+class CodedPhase {
+ public:
+  CodedPhase(Tail tail, const PhaseDistribution& independent) : independent_(&independent) {
+    for (const double probability :
+         {kLargest, 0.1, 0.02, 3e-3, 1e-4, 1e-6, 1e-8, 1e-10, 1e-12, 1e-14, 1e-16, 1e-18, 1e-20}) {
+      quantiles_.push_back(gaussian_quantile_of_tail(probability));
+      levels_v_.push_back(tail.exceeded_level_v(probability));
+    }
+  }
+  [[nodiscard]] double tail(double x) const {
+    if (x < levels_v_.front()) return std::max(independent_->tail(x), kLargest);
+    const auto above = std::upper_bound(levels_v_.begin(), levels_v_.end() - 1, x);
+    const auto i = static_cast<std::size_t>(above - levels_v_.begin());
+    const double run_v = levels_v_[i] - levels_v_[i - 1];
+    if (!(run_v > 0.0)) return 0.0;
+    const double slope = (quantiles_[i] - quantiles_[i - 1]) / run_v;
+    return gaussian_tail(quantiles_[i - 1] + slope * (x - levels_v_[i - 1]));
+  }
+  [[nodiscard]] double density(double x) const { return independent_->density(x); }
+
+ private:
+  static constexpr double kLargest = 0.3;
+  const PhaseDistribution* independent_;
+  std::vector<double> quantiles_;
+  std::vector<double> levels_v_;
+};
+
 /// Main symbols: +-1 and, with four levels, +-R/3: the middle eye takes the whole mismatch.
 std::vector<double> symbol_levels(const Signal& signal) {
   std::vector<double> levels;
@@ -162,25 +192,19 @@ std::vector<double> symbol_levels(const Signal& signal) {
   return levels;
 }
 
-/// Share of a Gaussian of `sigma` samples that lies in each sample around its middle.
-std::vector<double> sample_weights(double sigma, Eigen::Index reach) {
-  std::vector<double> weights;
-  double sum = 0.0;
+/// The mean over a Gaussian clock of sigma steps, for every `split`-th column of `wide` that has
+/// `reach` steps to either side.
+Eigen::MatrixXd averaged_over_phase(const Eigen::MatrixXd& wide, double sigma, Eigen::Index reach,
+                                    Eigen::Index split) {
+  Eigen::VectorXd weights(2 * reach + 1);
   for (Eigen::Index i = -reach; i <= reach; ++i) {
-    const double low = (static_cast<double>(std::abs(i)) - 0.5) / sigma;
-    weights.push_back(gaussian_tail(low) - gaussian_tail(low + 1.0 / sigma));
-    sum += weights.back();
+    weights[i + reach] = std::exp(-0.5 * std::pow(static_cast<double>(i) / sigma, 2));
   }
-  for (double& w : weights) w /= sum;
-  return weights;
-}
-
-Eigen::MatrixXd averaged_over_phase(const Eigen::MatrixXd& wide,
-                                    const std::vector<double>& weights) {
-  const auto num = static_cast<Eigen::Index>(weights.size());
-  Eigen::MatrixXd mean = Eigen::MatrixXd::Zero(wide.rows(), wide.cols() - num + 1);
+  weights /= weights.sum();
+  const Eigen::Index num = (wide.cols() - weights.size()) / split + 1;
+  Eigen::MatrixXd mean(wide.rows(), num);
   for (Eigen::Index i = 0; i < num; ++i) {
-    mean += weights[static_cast<std::size_t>(i)] * wide.middleCols(i, mean.cols());
+    mean.col(i) = wide.middleCols(i * split, weights.size()) * weights;
   }
   return mean;
 }
@@ -193,22 +217,29 @@ WholeEye whole_eye(const EyeModel& model, const Settings& settings, const WholeE
     throw std::invalid_argument("whole_eye: wanted at least 2 levels and a range > 0");
   }
   const PlacedEye eye = place_eye(model, place_of(settings));
+  const LineCode code = code_of(model);
   const Eigen::VectorXd aggressors_v = aggressors_at_error_ratio(eye, settings.fir);
   const int per_ui = model.input.samples_per_ui();
   const double clock_samples =
       per_ui >= kLeastSamplesPerUi ? model.link.jitter.common_random_ui * per_ui : 0.0;
   const auto reach = static_cast<Eigen::Index>(std::ceil(8.0 * clock_samples));
+  // Phases half a sigma of the clock apart or closer, so that sums over them are integrals.
+  const Eigen::Index split =
+      reach > 0 ? std::clamp<Eigen::Index>(std::lround(std::ceil(2.0 / clock_samples)), 1, 16) : 1;
   const Eigen::Index first = -(per_ui / 2) - reach;
-  const Eigen::Index num_phases = per_ui + 2 * reach;
+  const Eigen::Index num_phases = split * (per_ui + 2 * reach - 1) + 1;
 
   std::vector<Instant> instants;
   std::vector<Cumulant> cumulants;
   double max_level_v = 0.0;
   for (Eigen::Index i = 0; i < num_phases; ++i) {
     instants.push_back(instant_of(
-        eye, cursor_map(model, eye.place, static_cast<double>(first + i), eye.amplitude_v),
+        eye,
+        cursor_map(model, eye.place,
+                   static_cast<double>(first) + static_cast<double>(i) / static_cast<double>(split),
+                   eye.amplitude_v),
         settings.fir, settings.dfe_v));
-    cumulants.emplace_back(disturbance_of(eye, instants.back(), aggressors_v));
+    cumulants.emplace_back(with_least_noise(disturbance_of(eye, instants.back(), aggressors_v)));
     const Cumulant& c = cumulants.back();
     max_level_v = std::max(max_level_v, std::abs(instants.back().main_v()) +
                                             std::min(6.0 * std::sqrt(c.variance_v2()),
@@ -225,23 +256,34 @@ WholeEye whole_eye(const EyeModel& model, const Settings& settings, const WholeE
   whole.one_sided.resize(grid.num_levels, num_phases);
   whole.density = Eigen::MatrixXd::Zero(grid.num_levels, num_phases);
   Eigen::FFT<double> fft;
-  for (Eigen::Index i = 0; i < num_phases; ++i) {
-    const auto at = static_cast<std::size_t>(i);
-    const PhaseDistribution distribution(cumulants[at], size, fft);
-    const double signal_v = instants[at].signal_v;
-    const double main_v = instants[at].main_v();
+  const auto fill = [&](Eigen::Index phase, const auto& distribution) {
+    const Instant& instant = instants[static_cast<std::size_t>(phase)];
     for (Eigen::Index level = 0; level < whole.levels_v.size(); ++level) {
       const double v = whole.levels_v[level];
-      whole.one_sided(level, i) = distribution.tail(signal_v - v);
+      whole.one_sided(level, phase) = distribution.tail(instant.signal_v - v);
       double density = 0.0;
-      for (const double symbol : symbols) density += distribution.density(v - symbol * main_v);
-      whole.density(level, i) = density * bin_v / static_cast<double>(symbols.size());
+      for (const double symbol : symbols) {
+        density += distribution.density(v - symbol * instant.main_v());
+      }
+      whole.density(level, phase) = density * bin_v / static_cast<double>(symbols.size());
+    }
+  };
+  for (Eigen::Index i = 0; i < num_phases; ++i) {
+    const auto at = static_cast<std::size_t>(i);
+    const PhaseDistribution independent(cumulants[at], size, fft);
+    if (code.independent()) {
+      fill(i, independent);
+    } else {
+      fill(i, CodedPhase(Tail(eye, code, instants[at], aggressors_v, true), independent));
     }
   }
   if (reach > 0) {
-    const std::vector<double> weights = sample_weights(clock_samples, reach);
-    whole.one_sided = averaged_over_phase(whole.one_sided, weights);
-    whole.density = averaged_over_phase(whole.density, weights);
+    const auto averaged = [&](const Eigen::MatrixXd& wide) {
+      return averaged_over_phase(wide, clock_samples * static_cast<double>(split), reach * split,
+                                 split);
+    };
+    whole.one_sided = averaged(whole.one_sided);
+    whole.density = averaged(whole.density);
   }
   whole.error_ratio = 0.5 * (whole.one_sided + whole.one_sided.colwise().reverse());
   whole.sampling_index = per_ui / 2;

@@ -115,7 +115,7 @@ TEST(Distribution, AgreesWithACountOfSymbols) {
   for (int half = 0; half < 2; ++half) {
     for (unsigned bits = 0; bits < 1024; ++bits) {
       double sum = 0.0;
-      for (unsigned k = 0; k < 10; ++k) {
+      for (int k = 0; k < 10; ++k) {
         sum += ((bits >> k) & 1u) != 0 ? d.symbols_v[half * 10 + k] : -d.symbols_v[half * 10 + k];
       }
       sum_v[half].push_back(sum);

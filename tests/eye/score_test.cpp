@@ -159,6 +159,32 @@ TEST(Score, TurnsJitterIntoVoltsBySlope) {
               10 * kRounding);
 }
 
+// Derived: a lone cursor on a slope of s V/UI under clock jitter of sigma_c UI is as good as one
+// with noise of sqrt(sigma^2 + s^2 sigma_c^2); in the worst case it is the least within Q sigma_c.
+TEST(Score, AveragesOverClockJitter) {
+  constexpr int kPerUi = 32;
+  Eigen::VectorXd p(3 * kPerUi);
+  p.setZero();
+  for (Eigen::Index i = 0; i < kPerUi; ++i) p[kPerUi + i] = static_cast<double>(i) / kPerUi;
+  for (const double clock_ui : {0.002, 0.02}) {
+    Link link = link_of_pulse(p, kPerUi);
+    link.device.receiver.noise_rms_v = 0.01;
+    link.jitter.common_random_ui = clock_ui;
+    Settings settings = plain_settings(link);
+    settings.phase_samples =
+        -kPerUi / 2 + 1;  // the middle of the ramp; its peak is one sample short
+    const Score s = score(prepare(link), settings);
+    EXPECT_NEAR(s.main_cursor_v, 0.5, kRounding);
+    const double quantile = gaussian_quantile_of_tail(1e-12);
+    // Method: the sums over phase and line are good to 1e-6 of P, a few 1e-8 of N.
+    EXPECT_NEAR(*s.height.at_error_ratio_v, 2.0 * (0.5 - quantile * std::hypot(0.01, clock_ui)),
+                1e-6);
+    // The grid of samples is looked at: 1/32 UI steps within Q sigma_c.
+    const double reach_ui = std::floor(quantile * clock_ui * kPerUi) / kPerUi;
+    EXPECT_NEAR(s.height.worst_case_v, 2.0 * (0.5 - reach_ui - quantile * 0.01), 1e-12);
+  }
+}
+
 TEST(Score, AddsReceiverAndTransmitterNoiseAndSensitivity) {
   Link link = link_of_pulse(cursors({0.5}), 1);
   link.device.receiver.noise_rms_v = 0.003;
