@@ -18,7 +18,6 @@ using std::numbers::pi;
 using Complex = std::complex<double>;
 
 constexpr double kMu0 = 4e-7 * pi;
-constexpr double kEps0 = 1 / (kMu0 * kSpeedOfLightMPerS * kSpeedOfLightMPerS);
 constexpr double kEta0 = kMu0 * kSpeedOfLightMPerS;
 
 /// Impedance with air everywhere, and the share of the field's energy in the dielectric.
