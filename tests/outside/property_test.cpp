@@ -161,6 +161,14 @@ TEST_P(Property, MoreDisturbanceIsNeverBetter) {
   EXPECT_LE(optimum_v(shaken), before_v + kRoundingV);
 }
 
+TEST_P(Property, ALineCodeIsNeverWorseThanIndependentSymbols) {
+  link_.signal.levels = 2;
+  const double before_v = optimum_v(link_);
+  Link coded = link_;
+  coded.signal.line_code.kind = LineCodeKind::k8b10b;
+  EXPECT_GE(optimum_v(coded), before_v - kRoundingV);
+}
+
 TEST_P(Property, ThreadsChangeNoBitOfTheAnswer) {
   const EyeModel model = prepare(link_);
   RunControl two;
