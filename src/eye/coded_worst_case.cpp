@@ -82,7 +82,7 @@ double CodedIsi::longest_path(int position, bool upward) {
   const auto& sections = code_.sections();
   std::fill_n(value_.begin(), sections[s].num_from, 0.0);
   const double* const weight = weight_.data() + period;
-  Choice* choice = choice_.data();
+  [[maybe_unused]] Choice* choice = choice_.data();  // of this block; there is room when tracking
   int num_states = 0;
   for (Eigen::Index at = -place.offset; at < end;) {
     const LineCode::Section& section = sections[s];
@@ -112,7 +112,7 @@ double CodedIsi::longest_path(int position, bool upward) {
     }
     std::swap(value_, next_);
     at += section.num_symbols();
-    choice += code_.max_states();
+    if constexpr (kTrack) choice += code_.max_states();
     s = s + 1 == sections.size() ? 0 : s + 1;
   }
   const double most = *std::max_element(value_.begin(), value_.begin() + num_states);

@@ -6,6 +6,7 @@
 #include <cmath>
 #include <map>
 #include <random>
+#include <utility>
 #include <vector>
 
 #include "tapwright/base/normal.hpp"
@@ -185,18 +186,15 @@ TEST(CodedDistribution, NeverExceedsTheWorstCaseAndTheNoise) {
 // error: theta B step^2 / 8, and half a step where the tail is a staircase.
 TEST(CodedDistribution, WithLittleNoiseStaysCloseToTheGrid) {
   std::mt19937_64 random(15);
-  for (const LineCode& code : {LineCode::code_8b10b(), LineCode::manchester(),
-                               LineCode::machine(lopsided_machine()), LineCode::none()}) {
-    for (const Eigen::Index n : {6, 20, 60}) {
-      for (const double sigma_v : {0.0, 1e-4}) {
-        const CodedDisturbance d = sample(n, 4, sigma_v, random);
-        const CodedMoments moments = coded_moments(code, d.row, d.main_index);
-        const CodedGrid grid = coded_grid(code, d, 1e-5);
-        for (const double probability : {1e-3, 1e-6, 1e-12}) {
-          EXPECT_NEAR(exceeded_level_v(code, d, probability), grid.exceeded_level_v(probability),
-                      3e-3 * moments.deviation_v)
-              << code.period() << " " << n << " " << sigma_v << " " << probability;
-        }
+  for (const LineCode& code : {LineCode::code_8b10b(), LineCode::machine(lopsided_machine())}) {
+    for (const auto& [n, sigma_v] : {std::pair{6, 1e-4}, std::pair{20, 0.0}, std::pair{60, 1e-4}}) {
+      const CodedDisturbance d = sample(n, 4, sigma_v, random);
+      const CodedMoments moments = coded_moments(code, d.row, d.main_index);
+      const CodedGrid grid = coded_grid(code, d, 2e-5);
+      for (const double probability : {1e-3, 1e-6, 1e-12}) {
+        EXPECT_NEAR(exceeded_level_v(code, d, probability), grid.exceeded_level_v(probability),
+                    3e-3 * moments.deviation_v)
+            << code.period() << " " << n << " " << sigma_v << " " << probability;
       }
     }
   }
