@@ -86,6 +86,7 @@ struct Command {
 // One file a command.
 [[nodiscard]] Command solve_command();
 [[nodiscard]] Command score_command();
+[[nodiscard]] Command audit_command();
 [[nodiscard]] Command pulse_command();
 [[nodiscard]] Command example_command();
 [[nodiscard]] Command schema_command();

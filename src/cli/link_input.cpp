@@ -1,5 +1,6 @@
 #include "cli/link_input.hpp"
 
+#include <filesystem>
 #include <nlohmann/json.hpp>
 #include <ostream>
 
@@ -11,7 +12,13 @@
 
 namespace tapwright::cli {
 
-std::optional<EyeModel> model_from(const Arguments& arguments, Console& console) {
+std::string absolute_path(const std::string& path) {
+  std::error_code problem;
+  const auto absolute = std::filesystem::absolute(path, problem);
+  return problem ? path : absolute.lexically_normal().string();
+}
+
+std::vector<LinkChange> changes_from(const Arguments& arguments) {
   std::vector<LinkChange> changes;
   for (const std::string& word : arguments.texts("--set")) {
     const std::size_t equals = word.find('=');
@@ -20,6 +27,11 @@ std::optional<EyeModel> model_from(const Arguments& arguments, Console& console)
     }
     changes.push_back({word.substr(0, equals), word.substr(equals + 1)});
   }
+  return changes;
+}
+
+std::optional<EyeModel> model_from(const Arguments& arguments, Console& console) {
+  const std::vector<LinkChange> changes = changes_from(arguments);
   const auto file = arguments.text("LINK");
   const Result<Link> link =
       file ? read_link(*file, changes) : parse_link(example_link(), "built-in sample", "", changes);

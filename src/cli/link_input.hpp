@@ -6,6 +6,7 @@
 
 #include "cli/command.hpp"
 #include "tapwright/eye/eye_model.hpp"
+#include "tapwright/link/read_link.hpp"
 #include "tapwright/link/settings_file.hpp"
 
 namespace tapwright::cli {
@@ -13,6 +14,12 @@ namespace tapwright::cli {
 /// Reads the link named by LINK, or the built-in sample when there is none, with every --set
 /// applied; tells what is wrong. Empty when the link can't be used.
 [[nodiscard]] std::optional<EyeModel> model_from(const Arguments& arguments, Console& console);
+
+/// Every --set as a change. Errors: BadArgument.
+[[nodiscard]] std::vector<LinkChange> changes_from(const Arguments& arguments);
+
+/// `path` from the root, so that it can be named in a link file elsewhere.
+[[nodiscard]] std::string absolute_path(const std::string& path);
 
 /// Checks every output option before the long work; false after telling what is wrong. Two outputs
 /// may not both go to standard output.

@@ -1,6 +1,7 @@
 #include <cmath>
 #include <nlohmann/json.hpp>
 
+#include "report/settings_json.hpp"
 #include "tapwright/base/units.hpp"
 #include "tapwright/eye/baseline_wander.hpp"
 #include "tapwright/eye/error_bursts.hpp"
@@ -15,28 +16,6 @@ using Json = nlohmann::ordered_json;
 Json mv(double v) { return v_to_mv(v); }
 Json mv(const std::optional<double>& v) { return v ? Json(v_to_mv(*v)) : Json(nullptr); }
 Json or_null(const std::optional<double>& v) { return v ? Json(*v) : Json(nullptr); }
-
-Json settings_json(const EyeModel& model, const Settings& settings) {
-  const Device& device = model.link.device;
-  Json out;
-  Json taps = Json::array();
-  for (const KnobReading& r : readings(device, settings)) {
-    if (r.knob.kind == Knob::Kind::kSwing) out["swing_mvppd"] = r.value;
-    if (r.knob.kind != Knob::Kind::kFir) continue;
-    taps.push_back({{"position", device.transmitter.fir.taps[r.knob.index].position},
-                    {"value", r.value},
-                    {"code", r.code ? Json(*r.code) : Json(nullptr)}});
-  }
-  out["tx_fir"] = taps;
-  const CtleState& state = device.receiver.ctle[settings.ctle_index];
-  out["ctle"] = {{"state", state.code}, {"label", state.label}};
-  if (state.gain) out["ctle"]["gain"] = state.gain->code;
-  Json dfe = Json::array();
-  for (const double d : settings.dfe_v) dfe.push_back(v_to_mv(d));
-  out["dfe_mv"] = dfe;
-  out["phase_ui"] = static_cast<double>(settings.phase_samples) / model.link.samples_per_ui;
-  return out;
-}
 
 Json score_json(const Score& s) {
   Json aggressors = Json::array();
@@ -99,16 +78,6 @@ Json bursts_json(const ErrorBursts& b) {
           {"mean_errors", b.mean_errors},
           {"error_ratio_without_feedback", b.start_probability},
           {"error_ratio", b.error_ratio}};
-}
-
-const char* name_of(Proof::Kind kind) {
-  switch (kind) {
-    case Proof::Kind::kProven: return "proven";
-    case Proof::Kind::kBounded: return "bounded";
-    case Proof::Kind::kExhausted: return "exhausted";
-    case Proof::Kind::kNone: break;
-  }
-  return "none";
 }
 
 Json proof_json(const Proof& proof) {
