@@ -21,10 +21,13 @@ std::optional<Arguments> parse(const Command& command, std::vector<std::string> 
   CLI::App app;
   app.set_help_flag();
   std::map<std::string, std::vector<std::string>> texts;
+  std::map<std::string, std::string> places;
   std::map<std::string, bool> switches;
   for (const OptionRow& row : command.rows) {
     if (row.value.empty() && row.name.starts_with("--")) {
       app.add_flag(row.name, switches[row.name]);
+    } else if (!row.name.starts_with("--") && !row.repeats) {
+      app.add_option(row.name, places[row.name])->required(row.required);
     } else {
       auto* option = app.add_option(row.name, texts[row.name]);
       option->required(row.required);
@@ -52,6 +55,9 @@ std::optional<Arguments> parse(const Command& command, std::vector<std::string> 
   }
   for (auto it = texts.begin(); it != texts.end();) {
     it = it->second.empty() ? texts.erase(it) : std::next(it);
+  }
+  for (const auto& [name, word] : places) {
+    if (!word.empty()) texts[name] = {word};
   }
   for (const auto& [name, on] : switches) {
     if (on) texts[name] = {};
