@@ -9,7 +9,8 @@
 namespace tapwright {
 namespace {
 
-constexpr double kNegligibleTail = 0.002;  // of the peak; math.md section 2
+constexpr double kNegligibleTail = 0.002;  // of the peak
+constexpr int kLongRecordUi = 128;  // from here on both ends of a record are far from the pulse
 
 struct Span {
   int pre = 0;
@@ -63,6 +64,22 @@ int last_above_noise(const PulseResponse& pulse, int num_ui, int sign, double no
   return 0;
 }
 
+/// RMS of what a long record carries half a record away from its peak, where the response has died
+/// away: from second differences over UI, which a smooth tail does not show.
+double far_noise_v(const PulseResponse& pulse) {
+  const Eigen::Index n = pulse.size();
+  const Eigen::Index per_ui = pulse.samples_per_ui();
+  if (n < kLongRecordUi * per_ui) return 0.0;
+  const auto at = [&](Eigen::Index i) { return pulse.samples_v()[i % n]; };
+  const Eigen::Index first = pulse.peak_index() + n / 2;
+  double sum_v2 = 0.0;
+  for (Eigen::Index i = 0; i < n / 4; ++i) {
+    const double v = at(first + i) - 2.0 * at(first + i + per_ui) + at(first + i + 2 * per_ui);
+    sum_v2 += v * v / 6.0;
+  }
+  return std::sqrt(sum_v2 / static_cast<double>(n / 4));
+}
+
 struct ChosenSpan {
   Span span;
   std::string reason;
@@ -80,11 +97,14 @@ ChosenSpan choose_span(const Link& link, const std::vector<StatePulses>& states,
         std::max(span.post, first_below(remaining_sums(state.victim, whole.post, 1), limit_v));
   }
   std::string reason = "beyond it the cursors add up to less than 0.2 % of the peak";
-  const double noise_v = link.channel.record_noise_v;
+  const double noise_v = std::max(link.channel.record_noise_v, far_noise_v(input));
   if (noise_v > 0.0) {
+    // A long record is periodic: beyond half of it lies what comes before the signal.
+    const int num_ui = static_cast<int>(input.size() / input.samples_per_ui());
+    const int most = num_ui >= kLongRecordUi ? num_ui / 2 : num_ui + 1;
     const Span whole = whole_record(input);
-    const Span heard = {last_above_noise(input, whole.pre, -1, noise_v),
-                        last_above_noise(input, whole.post, 1, noise_v)};
+    const Span heard = {last_above_noise(input, std::min(whole.pre, most), -1, noise_v),
+                        last_above_noise(input, std::min(whole.post, most), 1, noise_v)};
     if (heard.pre < span.pre || heard.post < span.post) {
       reason = "beyond it the record sinks into its own noise of " +
                significant(v_to_mv(noise_v), 2) + " mV RMS per volt launched";
