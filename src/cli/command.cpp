@@ -117,7 +117,8 @@ RunControl run_control(const Arguments& arguments, const Console& console) {
 }
 
 const std::vector<Command>& commands() {
-  static const std::vector<Command> all = {solve_command(), score_command(), audit_command(), pulse_command(),
+  static const std::vector<Command> all = {solve_command(), score_command(), audit_command(),
+                                           pulse_command(), fit_command(),
                                            example_command(), schema_command()};
   return all;
 }

@@ -88,6 +88,7 @@ struct Command {
 [[nodiscard]] Command score_command();
 [[nodiscard]] Command audit_command();
 [[nodiscard]] Command pulse_command();
+[[nodiscard]] Command fit_command();
 [[nodiscard]] Command example_command();
 [[nodiscard]] Command schema_command();
 

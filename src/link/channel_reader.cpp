@@ -298,9 +298,15 @@ LineModel read_line_model(const Section& line) {
     return sheet;
   }
   if (line.has("a1_sqrt_ns_per_mm")) {
-    return annex_line(line.number("gamma0_per_mm"), line.number("a1_sqrt_ns_per_mm"),
-                      line.number("a2_ns_per_mm"), line.number("tau_ns_per_mm"),
-                      line.number("impedance_ohm"));
+    AnnexLine model = annex_line(line.number("gamma0_per_mm"), line.number("a1_sqrt_ns_per_mm"),
+                                 line.number("a2_ns_per_mm"), line.number("tau_ns_per_mm"),
+                                 line.number("impedance_ohm"));
+    if (line.has("dispersion")) {
+      const Section dispersion = line.at("dispersion");
+      model.dispersion =
+          Dispersion{dispersion.number("rise"), ghz_to_hz(dispersion.number("knee_ghz"))};
+    }
+    return model;
   }
   if (line.has("l_nh_per_m")) {
     return RlgcLine{line.number("r_ohm_per_m"), nh_to_h(line.number("l_nh_per_m")),
