@@ -235,11 +235,13 @@ std::optional<WorstReflection> worst_reflection_of(const Network& path, const Pa
   if (!(delay_s > 0.0)) return std::nullopt;
   const VectorXd& f = path.frequencies_hz;
   const double top = f[f.size() - 1];
-  const ImpedanceProfile profile = impedance_profile(path, 0, delay_s + 2.0 / top);
-  const VectorXd& k = profile.reflection;
-  // The taper spreads a boundary over three sections; a small part has two boundaries of opposite
-  // sign close together.
-  const Index n = k.size();
+  // The models reach well behind the end, since loss smears what comes from there.
+  const Boundaries boundaries = peeled(path, 0, 1.5 * delay_s + 4.0 / top, 0.5);
+  const VectorXd& k = boundaries.reflection;
+  const auto path_end = static_cast<Index>(std::ceil(delay_s / boundaries.dt_s)) + boundaries.lead;
+  const Index n = std::min(k.size(), path_end + 4);
+  // The taper spreads a boundary over some three sections; a small part has two boundaries of
+  // opposite sign close together.
   Index at = 0;
   double largest = 0.0;
   for (Index i = 0; i < n; ++i) {
@@ -251,15 +253,17 @@ std::optional<WorstReflection> worst_reflection_of(const Network& path, const Pa
     }
   }
   if (largest < 1e-4) return std::nullopt;
-  const Index begin = std::max<Index>(at - 3, 0);
-  const Index end = std::min<Index>(at + 4, n);
+  const Index begin = std::max<Index>(at - 4, 0);
+  const Index end = std::min<Index>(at + 5, k.size());
   WorstReflection worst;
-  worst.delay_s = std::clamp(profile.delay_s[at], 0.0, delay_s);
+  worst.delay_s =
+      std::clamp(static_cast<double>(at - boundaries.lead) * boundaries.dt_s, 0.0, delay_s);
   worst.share = worst.delay_s / delay_s;
-  worst.impedance_before_ohm =
-      begin > 0 ? profile.impedance_ohm[begin - 1] : path.reference_ohm[0].real();
-  for (Index i = begin; i < end; ++i) {
-    const double there = profile.impedance_ohm[i];
+  double there = path.reference_ohm[0].real();
+  for (Index i = 0; i < end; ++i) {
+    if (i == begin) worst.impedance_before_ohm = there;
+    there *= (1.0 + k[i]) / (1.0 - k[i]);
+    if (i < begin) continue;
     const double reflection =
         (there - worst.impedance_before_ohm) / (there + worst.impedance_before_ohm);
     if (std::abs(reflection) > std::abs(worst.reflection)) {
@@ -267,10 +271,8 @@ std::optional<WorstReflection> worst_reflection_of(const Network& path, const Pa
       worst.impedance_ohm = there;
     }
   }
-  // The models reach well behind the end, since loss smears what comes from there. Their difference
-  // counts, not the measured path: what a model can't show is missing from both.
-  const Boundaries boundaries = peeled(path, 0, 1.5 * delay_s + 4.0 / top, 0.5);
-  const Index middle = at - 1 + boundaries.lead;
+  // The difference of two models counts, not the measured path: what a model can't show is missing
+  // from both.
   // As many frequencies as the models' echoes need, whatever the file has.
   const auto steps = std::max<Index>(1000, static_cast<Index>(std::ceil(8.0 * delay_s * top)));
   const VectorXd grid = VectorXd::LinSpaced(steps + 1, 0.0, top);
@@ -279,8 +281,7 @@ std::optional<WorstReflection> worst_reflection_of(const Network& path, const Pa
                   symbol_rate_bd);
   };
   const auto with = eye_without(0, 0);
-  const auto without = eye_without(std::max<Index>(middle - 4, 0),
-                                   std::min<Index>(middle + 5, boundaries.reflection.size()));
+  const auto without = eye_without(begin, end);
   if (with && without) worst.eye_cost_v = *without - *with;
   return worst;
 }
