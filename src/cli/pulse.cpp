@@ -30,7 +30,11 @@ ExitCode run_pulse(const Arguments& arguments, Console& console) {
   const auto settings = asked ? settings_from(arguments, console, *model) : plain_settings(*model);
   if (!settings) return ExitCode::kBadInput;
 
-  const PulseReport report = pulse_report(*model, *settings);
+  PulseReport report = pulse_report(*model, *settings);
+  Result<std::vector<FileQuality>> files = measure_files(model->link);
+  if (!files) console.tell(files.notes);
+  if (!files) return ExitCode::kBadInput;
+  report.files = std::move(*files.value);
   if (!write_to(arguments, console, "--json", json_of(report))) return ExitCode::kBadInput;
   if (!write_to(arguments, console, "--csv", csv_of(report))) return ExitCode::kBadInput;
   if (!takes_standard_output(arguments, kOutputs)) console.out << text_of(report);
@@ -41,7 +45,7 @@ ExitCode run_pulse(const Arguments& arguments, Console& console) {
 
 Command pulse_command() {
   return {"pulse",
-          "the pulse response and cursors that a link has",
+          "the pulse response and cursors that a link has, and the quality of its files",
           "Without a setting: largest swing, FIR flat, first CTLE state, DFE off.",
           [] {
             std::vector<OptionRow> rows = {{"LINK", "", "the built-in sample", "link file"}, set_row()};

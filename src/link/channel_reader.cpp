@@ -1,6 +1,7 @@
 #include "link/channel_reader.hpp"
 
 #include <algorithm>
+#include <filesystem>
 #include <cmath>
 #include <complex>
 #include <functional>
@@ -20,6 +21,7 @@
 #include "tapwright/channel/network_operations.hpp"
 #include "tapwright/channel/pattern.hpp"
 #include "tapwright/channel/ports.hpp"
+#include "tapwright/channel/quality.hpp"
 #include "tapwright/channel/touchstone.hpp"
 
 namespace tapwright {
@@ -163,32 +165,55 @@ struct Piece {
 };
 
 std::shared_ptr<const Network> read_network_file(const Section& name, InputFiles& files) {
-  const std::optional<std::string> text = files.read(name);
-  if (!text) return nullptr;
   const std::string path = files.resolved(name.text());
-  const std::string key = files.used().back().sha256 + " " + path;
-  if (files.cache() != nullptr) {
-    if (auto known = files.cache()->networks.find(key)) return known;
+  // A pipe can be read once only.
+  const bool may_keep = files.cache() != nullptr && std::filesystem::is_regular_file(path);
+  if (may_keep) {
+    const Result<std::string> digest = file_sha256(path);
+    const auto known = digest ? files.cache()->networks.find(*digest.value + " " + path) : nullptr;
+    if (known) {
+      files.add({path, *digest.value, {}});
+      return known;
+    }
   }
-  Result<Network> parsed = parse_touchstone(*text, path);
-  adopt_here(name, parsed.notes);
-  if (!parsed) return nullptr;
-  auto network = std::make_shared<const Network>(std::move(*parsed.value));
+  Result<TouchstoneFile> file = read_touchstone(path);
+  if (!file && file.notes.size() == 1 && file.notes[0].line == 0 && file.notes[0].file == path) {
+    // The file as a whole: told by the name that the link file has for it.
+    name.error(shown_text(name.text()) + ": " + file.notes[0].message);
+    return nullptr;
+  }
+  adopt_here(name, file.notes);
+  if (!file) return nullptr;
+  files.add({path, file.value->sha256, {}});
+  auto network = std::make_shared<const Network>(std::move(file.value->network));
   // A file with warnings is read again, so that they are told again.
-  if (files.cache() != nullptr && parsed.notes.empty()) files.cache()->networks.keep(key, network);
+  if (may_keep && file.notes.empty()) {
+    files.cache()->networks.keep(file.value->sha256 + " " + path, network);
+  }
   return network;
 }
 
 /// The two-port that a Touchstone file holds between the ports of its map.
 std::optional<Network> read_path(const Section& section, bool may_guess, InputFiles& files) {
   const Section name = section.at("file");
-  const std::shared_ptr<const Network> network = read_network_file(name, files);
+  std::shared_ptr<const Network> network = read_network_file(name, files);
   if (!network) return std::nullopt;
+  if (section.has("repair")) {
+    PassiveRepair repair = nearest_passive(*network);
+    if (repair.num_changed > 0) {
+      name.warning("as asked, " + std::to_string(repair.num_changed) + " of " +
+                   std::to_string(network->num_points()) +
+                   " points were made passive, by at most " +
+                   significant(repair.largest_change, 2));
+    }
+    network = std::make_shared<const Network>(std::move(repair.network));
+  }
   PortMap map{{1}, {2}};
   if (section.has("ports")) {
     const Section ports = section.at("ports");
     map.in = ports.value().at("in").get<std::vector<int>>();
     map.out = ports.value().at("out").get<std::vector<int>>();
+    if (may_guess) files.add_ports(files.resolved(name.text()), map);
     return value_or_notes(ports, through_path(*network, map, ""));
   }
   if (network->num_ports() != 2) {
@@ -206,6 +231,7 @@ std::optional<Network> read_path(const Section& section, bool may_guess, InputFi
     }
     map = maps->front();
   }
+  if (may_guess) files.add_ports(files.resolved(name.text()), map);
   return value_or_notes(section, through_path(*network, map, ""));
 }
 

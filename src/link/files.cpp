@@ -19,8 +19,7 @@ InputFiles InputFiles::fresh() const {
 
 bool InputFiles::are_unchanged(const std::vector<InputFile>& files) {
   for (const InputFile& file : files) {
-    const Result<TextFile> now = read_text_file(file.path);
-    if (!now || now.value->sha256 != file.sha256) return false;
+    if (file_sha256(file.path).value != file.sha256) return false;
   }
   for (const InputFile& file : files) add(file);
   return true;
@@ -32,6 +31,12 @@ void InputFiles::add(InputFile file) {
   if (!known) used_.push_back(std::move(file));
 }
 
+void InputFiles::add_ports(const std::string& path, const PortMap& ports) {
+  for (InputFile& file : used_) {
+    if (file.path == path) file.ports = ports;
+  }
+}
+
 std::optional<std::string> InputFiles::read(const Section& name) {
   const std::string path = resolved(name.text());
   Result<TextFile> file = read_text_file(path);
@@ -40,7 +45,7 @@ std::optional<std::string> InputFiles::read(const Section& name) {
       name.error(shown_text(name.text()) + ": " + note.message);
     return std::nullopt;
   }
-  add({path, file.value->sha256});
+  add({path, file.value->sha256, {}});
   return std::move(file.value->text);
 }
 

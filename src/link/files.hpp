@@ -25,6 +25,8 @@ class InputFiles {
   /// Reads the file named by `name` (a text); a note at its place when that fails.
   [[nodiscard]] std::optional<std::string> read(const Section& name);
   void add(InputFile file);
+  /// Remembers between which ports a file that was added is on the way to the receiver.
+  void add_ports(const std::string& path, const PortMap& ports);
   /// Reads the files again; true, and they count as used, when their bytes are still the same.
   [[nodiscard]] bool are_unchanged(const std::vector<InputFile>& files);
   [[nodiscard]] LinkCache::Kept* cache() const { return cache_; }

@@ -7,6 +7,7 @@
 #include "report/text_table.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
+#include "tapwright/report/quality_report.hpp"
 #include "tapwright/report/solution_report.hpp"
 
 namespace tapwright {
@@ -40,6 +41,7 @@ PulseReport pulse_report(const EyeModel& model, const Settings& settings) {
                      filtered.pulse,
                      state.peak_index() + settings.phase_samples + lead,
                      {cursors_at(plain, state.peak_index(), pre, post), pre},
+                     {},
                      {}};
   report.after = {cursors_at(filtered.pulse, report.sample_index, pre, post), pre};
   return report;
@@ -85,6 +87,8 @@ std::string text_of(const PulseReport& report) {
     text += item_text("  ", std::to_string(quiet) + " more cursors, under " +
                                 fixed(v_to_mv(floor_v), 2) + " mV or after the 24th, are in --csv and --json");
   }
+  text += text_of(report.files, model.link.device.transmitter.swings.at(report.settings.swing_index)
+                                    .value);
   for (const auto* notes : {&model.link.warnings, &model.warnings}) {
     for (const Diagnostic& note : *notes) text += item_text("  ", "note: " + note.message);
   }
@@ -110,6 +114,9 @@ std::string json_of(const PulseReport& report) {
                        {"after_fir", list(report.after.values)}};
   out["unequalised_mv"] = list(report.unequalised.samples_v());
   out["equalised_mv"] = list(report.equalised.samples_v());
+  const double swing_v =
+      report.model->link.device.transmitter.swings.at(report.settings.swing_index).value;
+  out["files"] = nlohmann::ordered_json::parse(json_of(report.files, swing_v));
   return out.dump(2, ' ', false, nlohmann::ordered_json::error_handler_t::replace) + "\n";
 }
 

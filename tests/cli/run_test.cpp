@@ -172,5 +172,46 @@ TEST_F(Cli, PulseAgreesWithTheFile) {
   EXPECT_NE(o.out.find(",800,800\n"), std::string::npos) << o.out;
 }
 
+TEST_F(Cli, PulseTellsTheQualityOfATouchstoneFile) {
+  // A matched two-port with a delay of 1 ns, and one point with a gain of 1.1 from 2 to 1.
+  std::ofstream file(path("gain.s2p"));
+  file << "# MHZ S MA R 50\n";
+  for (int k = 0; k <= 200; ++k) {
+    const double turn = -360.0 * 0.05 * k;
+    file << 50 * k << " 0 0 0.8 " << turn << (k == 100 ? " 1.1 " : " 0.8 ") << turn << " 0 0\n";
+  }
+  file.close();
+  std::ofstream(path("file.json")) << R"({
+    "format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 5},
+    "channel": {"touchstone": {"file": "gain.s2p"}}})";
+  const Outcome plain = outcome_of({"pulse", path("file.json")});
+  ASSERT_EQ(plain.code, ExitCode::kOk) << plain.err;
+  EXPECT_NE(plain.out.find("gain.s2p, from port 1 to 2\n"), std::string::npos) << plain.out;
+  EXPECT_NE(plain.out.find("largest gain 1.1000 at 5 GHz"), std::string::npos) << plain.out;
+
+  const auto json = nlohmann::json::parse(outcome_of({"pulse", path("file.json"), "--json", "-"}).out);
+  ASSERT_EQ(json["files"].size(), 1U);
+  // By hand: (1.1 - 1.00001)/0.1 of one point in 201.
+  EXPECT_NEAR(json["files"][0]["passivity_percent"].get<double>(), 100.0 - 99.99 / 201.0, 1e-9);
+  EXPECT_NEAR(json["files"][0]["delay_ps"].get<double>(), 1000.0, 1e-6);
+
+  // Repaired on request, and said so; the quality remains that of the file.
+  std::ofstream(path("repaired.json")) << R"({
+    "format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 5},
+    "channel": {"touchstone": {"file": "gain.s2p", "repair": "nearest_passive"}}})";
+  const Outcome repaired = outcome_of({"pulse", path("repaired.json"), "--json", "-"});
+  ASSERT_EQ(repaired.code, ExitCode::kOk) << repaired.err;
+  EXPECT_EQ(nlohmann::json::parse(repaired.out)["files"], json["files"]);
+  const std::string all = repaired.err + outcome_of({"pulse", path("repaired.json")}).out;
+  std::string words;
+  for (const char c : all) {
+    if (c == '\n') words += ' ';
+    if (c != '\n' && !(c == ' ' && words.ends_with(' '))) words += c;
+  }
+  EXPECT_NE(words.find("as asked, 1 of 201 points were made passive, by at most 0.1"),
+            std::string::npos)
+      << all;
+}
+
 }  // namespace
 }  // namespace tapwright::cli

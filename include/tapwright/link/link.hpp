@@ -7,6 +7,7 @@
 #include <vector>
 
 #include "tapwright/base/diagnostic.hpp"
+#include "tapwright/channel/ports.hpp"
 #include "tapwright/channel/received_spectrum.hpp"
 #include "tapwright/equalizer/device.hpp"
 
@@ -78,6 +79,8 @@ struct RegisterField {
 struct InputFile {
   std::string path;
   std::string sha256;
+  /// Of a Touchstone file on the way from driver to receiver: the ports that it was read between.
+  std::optional<PortMap> ports;
 };
 
 struct Link {

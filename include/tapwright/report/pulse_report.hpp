@@ -2,8 +2,10 @@
 // The pulse response and cursors that a link has.
 
 #include <string>
+#include <vector>
 
 #include "tapwright/eye/score.hpp"
+#include "tapwright/link/file_quality.hpp"
 
 namespace tapwright {
 
@@ -17,6 +19,7 @@ struct PulseReport {
   Eigen::Index sample_index = 0;  ///< the sampling instant in both
   CursorRow before;           ///< cursors of the unequalised pulse at its own peak
   CursorRow after;            ///< cursors after FIR, before the DFE, at the sampling instant
+  std::vector<FileQuality> files;  ///< of the link's Touchstone files; the caller measures them
 };
 
 [[nodiscard]] PulseReport pulse_report(const EyeModel& model, const Settings& settings);
