@@ -117,9 +117,14 @@ RunControl run_control(const Arguments& arguments, const Console& console) {
 }
 
 const std::vector<Command>& commands() {
-  static const std::vector<Command> all = {solve_command(), score_command(), audit_command(),
-                                           pulse_command(), fit_command(),
-                                           example_command(), schema_command()};
+  static const std::vector<Command> all = {solve_command(),
+                                           score_command(),
+                                           audit_command(),
+                                           sweep_command(),
+                                           pulse_command(),
+                                           fit_command(),
+                                           example_command(),
+                                           schema_command()};
   return all;
 }
 

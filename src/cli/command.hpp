@@ -89,6 +89,7 @@ struct Command {
 [[nodiscard]] Command audit_command();
 [[nodiscard]] Command pulse_command();
 [[nodiscard]] Command fit_command();
+[[nodiscard]] Command sweep_command();
 [[nodiscard]] Command example_command();
 [[nodiscard]] Command schema_command();
 

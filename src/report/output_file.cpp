@@ -59,35 +59,44 @@ std::optional<Diagnostic> check_output(const std::string& path) {
 }
 
 std::optional<Diagnostic> write_output(const std::string& path, std::string_view bytes) {
+  return write_output(path, [&](const Sink& sink) {
+    sink(bytes);
+    return std::optional<Diagnostic>();
+  });
+}
+
+std::optional<Diagnostic> write_output(
+    const std::string& path, const std::function<std::optional<Diagnostic>(const Sink&)>& fill) {
   if (auto blocked = check_output(path)) return blocked;
   struct stat found{};
   const bool exists = ::stat(path.c_str(), &found) == 0;
-  if (exists && !S_ISREG(found.st_mode)) {
-    const int descriptor = ::open(path.c_str(), O_WRONLY | O_CLOEXEC);
-    if (descriptor < 0) return problem(path, std::strerror(errno));
-    const int failed = write_all(descriptor, bytes);
-    ::close(descriptor);
-    if (failed != 0) return problem(path, std::strerror(failed));
-    return std::nullopt;
-  }
+  const bool direct = exists && !S_ISREG(found.st_mode);
   // A name that is a link keeps being one: what it points at is replaced.
-  const std::string target = exists ? std::filesystem::canonical(path).string() : path;
+  const std::string target = exists && !direct ? std::filesystem::canonical(path).string() : path;
   std::string temporary = target + ".XXXXXX";
-  const int descriptor = ::mkostemp(temporary.data(), O_CLOEXEC);
+  const int descriptor = direct ? ::open(path.c_str(), O_WRONLY | O_CLOEXEC)
+                                : ::mkostemp(temporary.data(), O_CLOEXEC);
   if (descriptor < 0) return problem(path, std::strerror(errno));
-  // mkostemp makes files private; a result is as readable as the one it replaces, or as the user's
-  // mask allows.
-  const mode_t mask = ::umask(0);
-  ::umask(mask);
-  int failed = ::fchmod(descriptor, exists ? found.st_mode & 07777 : 0666 & ~mask) == 0 ? 0 : errno;
-  if (failed == 0) failed = write_all(descriptor, bytes);
-  if (failed == 0 && ::fsync(descriptor) != 0) failed = errno;
-  if (::close(descriptor) != 0 && failed == 0) failed = errno;
-  if (failed == 0 && ::rename(temporary.c_str(), target.c_str()) != 0) failed = errno;
-  if (failed != 0) {
-    ::unlink(temporary.c_str());
-    return problem(path, std::strerror(failed));
+  int failed = 0;
+  if (!direct) {
+    // mkostemp makes files private; a result is as readable as the one it replaces, or as the
+    // user's mask allows.
+    const mode_t mask = ::umask(0);
+    ::umask(mask);
+    failed = ::fchmod(descriptor, exists ? found.st_mode & 07777 : 0666 & ~mask) == 0 ? 0 : errno;
   }
+  const Sink sink = [&](std::string_view bytes) {
+    if (failed == 0) failed = write_all(descriptor, bytes);
+  };
+  std::optional<Diagnostic> refused = fill(sink);
+  if (!direct && failed == 0 && ::fsync(descriptor) != 0) failed = errno;
+  if (::close(descriptor) != 0 && failed == 0) failed = errno;
+  if (!direct && !refused && failed == 0 && ::rename(temporary.c_str(), target.c_str()) != 0) {
+    failed = errno;
+  }
+  if (!direct && (refused || failed != 0)) ::unlink(temporary.c_str());
+  if (refused) return refused;
+  if (failed != 0) return problem(path, std::strerror(failed));
   return std::nullopt;
 }
 

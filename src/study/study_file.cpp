@@ -14,6 +14,7 @@
 #include "tapwright/base/digest.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/channel/text_file.hpp"
+#include "tapwright/equalizer/knobs.hpp"
 #include "tapwright/study/normal_draws.hpp"
 
 namespace tapwright {
@@ -112,6 +113,7 @@ class Reader {
       adopt(study.link.changes.empty() ? "link" : "changes", link.notes);
       return false;
     }
+    for (const Knob& knob : knobs_of(link.value->device)) study.knobs.push_back(knob.name);
     study.inputs.insert(study.inputs.end(), link.value->inputs.begin(), link.value->inputs.end());
     const auto numbers =
         numbers_in_link(study.link.text, path, study.link.base_directory, study.link.changes);

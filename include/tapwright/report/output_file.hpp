@@ -1,6 +1,7 @@
 #pragma once
 // Files are written whole or not at all.
 
+#include <functional>
 #include <optional>
 #include <string>
 #include <string_view>
@@ -20,5 +21,13 @@ namespace tapwright {
 /// Errors: the reason, naming the path; nothing is left behind.
 [[nodiscard]] std::optional<Diagnostic> write_output(const std::string& path,
                                                      std::string_view bytes);
+
+/// Takes bytes in pieces.
+using Sink = std::function<void(std::string_view)>;
+
+/// The same for bytes that come in pieces, too many to be kept; `fill` gives them to the sink. What
+/// `fill` answers is told, and leaves the older file as it was.
+[[nodiscard]] std::optional<Diagnostic> write_output(
+    const std::string& path, const std::function<std::optional<Diagnostic>(const Sink&)>& fill);
 
 }  // namespace tapwright

@@ -69,7 +69,8 @@ struct Study {
   LinkSource link;
   std::vector<Axis> axes;         ///< in the order of the file
   std::size_t switch_axis = 0;    ///< index in `axes`
-  std::vector<InputFile> inputs;  ///< study file first
+  std::vector<std::string> knobs;  ///< names of the base link's knobs
+  std::vector<InputFile> inputs;   ///< study file first
   std::vector<Diagnostic> warnings;
 
   [[nodiscard]] std::int64_t num_points() const;
