@@ -88,7 +88,8 @@ LineCode code_of(const EyeModel& model) {
 double coded_isi_v(const LineCode& code, const Instant& instant) {
   if (code.independent()) return instant.isi_v();
   // A DFE tap beyond the span meets a symbol that the row does not reach: count it as independent.
-  return coded_worst_case(code, instant.residual.values, instant.residual.main_index).isi_v() +
+  CodedIsi isi(code, instant.residual.values.size(), instant.residual.main_index);
+  return isi.worst(instant.residual.values) +
          instant.beyond_dfe_v.lpNorm<1>();
 }
 

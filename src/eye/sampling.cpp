@@ -6,6 +6,7 @@
 #include <random>
 
 #include "eye/instant.hpp"
+#include "tapwright/eye/coded_worst_case.hpp"
 #include "tapwright/eye/score.hpp"
 
 namespace tapwright {
@@ -30,8 +31,64 @@ double height_of(const PlacedEye& eye, const LineCode& code, const Eigen::Vector
              : at_error_ratio_height_v(eye, code, fir, dfe_v);
 }
 
+/// The best phase in the worst case under a line code, whose exact worst case costs far more than
+/// that of independent symbols. Any sequence of the code bounds what a phase is worth from above:
+/// phases are looked at in order of promise, and those that a known sequence rules out are left.
+Eigen::Index best_coded_phase(const EyeModel& model, const Settings& settings,
+                              const LineCode& code) {
+  struct Candidate {
+    Eigen::Index phase = 0;
+    Eigen::VectorXd residual_v;
+    double promise_v = 0.0;  // worst case of independent symbols: no more than the code's
+    double clear_v = 0.0;    // height without intersymbol interference
+  };
+  std::vector<Candidate> candidates;
+  Eigen::Index main = 0;
+  for (const Eigen::Index phase : candidate_phases(model)) {
+    Place place = place_of(settings);
+    place.phase_samples = phase;
+    const PlacedEye eye = place_eye(model, place);
+    const Eigen::VectorXd dfe_v = settled_at(model, eye.phases.front(), settings.fir);
+    Instant instant = instant_of(eye, eye.phases.front(), settings.fir, dfe_v);
+    const double promise_v = worst_case_height_v(eye, settings.fir.data(), dfe_v.data());
+    main = instant.residual.main_index;
+    candidates.push_back({phase, std::move(instant.residual.values), promise_v, 0.0});
+    Candidate& last = candidates.back();
+    last.clear_v = promise_v + 2.0 * (last.residual_v.lpNorm<1>() - std::abs(last.residual_v[main]));
+  }
+  std::stable_sort(candidates.begin(), candidates.end(), [](const Candidate& a, const Candidate& b) {
+    return a.promise_v > b.promise_v;
+  });
+  CodedIsi isi(code, candidates.front().residual_v.size(), main);
+  std::vector<Eigen::VectorXd> sequences;
+  const Candidate* best = nullptr;
+  double best_v = 0.0;
+  for (const Candidate& one : candidates) {
+    const auto height_with = [&](const Eigen::VectorXd& signs) {
+      return one.clear_v - 2.0 * signs.dot(one.residual_v);
+    };
+    if (best != nullptr && std::any_of(sequences.begin(), sequences.end(), [&](const auto& signs) {
+          return height_with(signs) < best_v;
+        })) {
+      continue;
+    }
+    sequences.push_back(isi.cut(one.residual_v).signs);
+    const double height_v = height_with(sequences.back());
+    // Equal heights go to the earliest phase, in whatever order they were looked at.
+    if (best == nullptr || height_v > best_v || (height_v == best_v && one.phase < best->phase)) {
+      best = &one;
+      best_v = height_v;
+    }
+  }
+  return best->phase;
+}
+
 Eigen::Index best_phase(const EyeModel& model, const Settings& settings) {
   const LineCode code = code_of(model);
+  if (!code.independent() && model.link.objective == ObjectiveKind::kWorstCase &&
+      mask_reach(model) == 0 && model.link.jitter.common_random_ui == 0.0) {
+    return best_coded_phase(model, settings, code);
+  }
   Eigen::Index best = 0;
   double best_v = -std::numeric_limits<double>::infinity();
   for (const Eigen::Index phase : candidate_phases(model)) {

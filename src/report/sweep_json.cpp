@@ -84,6 +84,7 @@ Json summary_json(const Study& study, const RecordHeader& header, const SweepSum
                       {"origin", header.plan.shared[s].origin},
                       {"knobs", json_of(header.plan.shared[s].knobs)},
                       {"met", of.met},
+                      {"overdrives", of.not_allowed},
                       {"least_margin_mv", or_null(of.least_margin_mv)},
                       {"least_at", of.least_margin_mv ? places_json(study, of.least_point)
                                                       : Json(nullptr)}});

@@ -61,7 +61,7 @@ Json json_of(const SweepRecord& record) {
   out["proof"] = record.proof;
   out["gap_mv"] = record.gap_mv;
   Json shared = Json::array();
-  for (const SweepRecord::Shared& s : record.shared) shared.push_back({s.eye_mv, s.met});
+  for (const SweepRecord::Shared& s : record.shared) shared.push_back({s.eye_mv, s.met, s.allowed});
   out["shared"] = std::move(shared);
   return out;
 }
@@ -140,7 +140,8 @@ Result<SweepRecord> record_from(const std::string& line, const std::string& file
     record.proof = json.at("proof").get<std::string>();
     record.gap_mv = json.at("gap_mv").get<double>();
     for (const Json& s : json.at("shared")) {
-      record.shared.push_back({s.at(0).get<double>(), s.at(1).get<bool>()});
+      record.shared.push_back(
+          {s.at(0).get<double>(), s.at(1).get<bool>(), s.at(2).get<bool>()});
     }
     return {std::move(record), {}};
   } catch (const Json::exception&) {

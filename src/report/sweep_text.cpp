@@ -184,8 +184,12 @@ class Writer {
                                 where(study_, of.least_point) + "; the target is met at " +
                                 std::to_string(of.met) + " of " + std::to_string(summary_.done) +
                                 " points.");
+    if (of.not_allowed > 0) {
+      text += item_text("  ", "It would overdrive the receiver at " + std::to_string(of.not_allowed) +
+                                  " points; no setting that was tried is allowed at more of them.");
+    }
     const std::optional<double>& bound = header_.plan.shared_bound_mv;
-    if (bound && of.least_margin_mv) {
+    if (bound && of.least_margin_mv && of.not_allowed == 0) {
       const double left_mv = *bound - *of.least_margin_mv;
       text += item_text(
           "  ", left_mv < 1e-6

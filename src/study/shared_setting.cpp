@@ -90,6 +90,14 @@ std::string shown(const std::vector<KnobValue>& knobs) {
   return text;
 }
 
+bool keeps_input_limit(const EyeModel& model, const Settings& settings) {
+  const auto& limit_v = model.link.device.receiver.peak_input_v;
+  if (!limit_v) return true;
+  const Transmitter& transmitter = model.link.device.transmitter;
+  const double at_1v = peak_input_v(transmitter.fir, settings.fir, model.input);
+  return transmitter.swings[settings.swing_index].value * at_1v <= *limit_v * (1.0 + 1e-12);
+}
+
 bool same_knobs(const Device& a, const Device& b) {
   const FirLimits& fa = a.transmitter.fir;
   const FirLimits& fb = b.transmitter.fir;

@@ -23,6 +23,9 @@ namespace tapwright {
 /// "swing 3, fir:-1 -4, ctle 2": codes where there are any.
 [[nodiscard]] std::string shown(const std::vector<KnobValue>& knobs);
 
+/// Whether the receiver's input stays within its limit, where it has one.
+[[nodiscard]] bool keeps_input_limit(const EyeModel& model, const Settings& settings);
+
 /// Whether one setting of swing, FIR, CTLE and gain means the same on both: equal codes.
 [[nodiscard]] bool same_knobs(const Device& a, const Device& b);
 

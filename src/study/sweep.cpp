@@ -6,6 +6,7 @@
 #include <map>
 #include <mutex>
 #include <thread>
+#include <utility>
 
 #include "study/shared_setting.hpp"
 #include "tapwright/base/text.hpp"
@@ -33,16 +34,15 @@ const char* name_of(Proof::Kind kind) {
 }
 
 /// What one setting is worth at a point, phase and DFE adapted. The whole score is taken only where
-/// the target asks for more than a height.
+/// the target asks for a width.
 SweepRecord::Shared shared_outcome(const EyeModel& model, const Settings& setting) {
   const Settings here = readapted(model, setting);
   const double height_v = objective_height_v(model, here);
   const Target& target = model.link.target;
-  bool met = height_v > 0.0 && height_v >= target.eye_height_v;
-  if (met && (target.eye_width_ui > 0.0 || model.link.device.receiver.peak_input_v)) {
-    met = score(model, here).target_met();
-  }
-  return {v_to_mv(height_v), met};
+  const bool allowed = keeps_input_limit(model, setting);
+  bool met = allowed && height_v > 0.0 && height_v >= target.eye_height_v;
+  if (met && target.eye_width_ui > 0.0) met = score(model, here).target_met();
+  return {v_to_mv(height_v), met, allowed};
 }
 
 /// One line out of the notes of a point that can't be used.
@@ -206,6 +206,7 @@ void SweepSummary::add(const SweepRecord& record) {
     const double shared_mv = record.shared[s].eye_mv - record.target_mv;
     OfShared& of = of_shared[s];
     of.met += record.shared[s].met ? 1 : 0;
+    of.not_allowed += record.shared[s].allowed ? 0 : 1;
     if (!of.least_margin_mv || shared_mv < *of.least_margin_mv) {
       of.least_margin_mv = shared_mv;
       of.least_point = record.point;
@@ -268,7 +269,10 @@ std::optional<std::size_t> SweepSummary::one_for_all() const {
   if (done == failed) return std::nullopt;
   std::optional<std::size_t> best;
   for (std::size_t s = 0; s < of_shared.size(); ++s) {
-    if (!best || *of_shared[s].least_margin_mv > *of_shared[*best].least_margin_mv) best = s;
+    const auto worth = [&](std::size_t i) {
+      return std::pair(-of_shared[i].not_allowed, *of_shared[i].least_margin_mv);
+    };
+    if (!best || worth(s) > worth(*best)) best = s;
   }
   return best;
 }

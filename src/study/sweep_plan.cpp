@@ -15,10 +15,11 @@
 namespace tapwright {
 namespace {
 
-constexpr std::int64_t kMostPlaces = 17;        // on the switch axis
-constexpr std::int64_t kMostCombinations = 12;  // of the other axes, at one place
+constexpr std::int64_t kMostPlaces = 9;        // on the switch axis
+constexpr std::int64_t kMostCombinations = 6;   // of the other axes, at one place
 constexpr int kMostRounds = 24;                 // of looking at more points together
 constexpr double kSameHeight_v = 1e-9;
+constexpr double kImpossible_v = -1e9;
 
 /// Ends of an axis with numbers; of an axis with names every value while there are few.
 std::vector<std::int64_t> telling_places(const Axis& axis) {
@@ -119,7 +120,7 @@ class Planner {
 
   double height_at(const Scout& scout, const std::vector<KnobValue>& knobs) const {
     const auto carried = carried_over(knobs, scout.model.link.device);
-    if (!carried) return -1e9;
+    if (!carried || !keeps_input_limit(scout.model, *carried)) return kImpossible_v;
     return objective_height_v(scout.model, readapted(scout.model, *carried));
   }
 
@@ -134,7 +135,7 @@ class Planner {
     if (wanted.empty()) return best;
     std::vector<const Scout*> binding{wanted.front()};
     if (wanted.size() > 1) binding.push_back(wanted.back());
-    best.least_v = -1e9;
+    best.least_v = kImpossible_v;
     for (int round = 0; round < kMostRounds && !control_.stopped(); ++round) {
       std::vector<EyeModel> models;
       for (const Scout* scout : binding) models.push_back(scout->model);
@@ -208,6 +209,7 @@ class Planner {
     }
     bool proven = true;
     std::int64_t num = 0;
+    std::vector<std::int64_t> ends;
     for (std::int64_t from = 0; from <= last && !control_.stopped();) {
       // Whether any setting holds as far as `to` can only change once, from yes to no.
       std::int64_t good = from - 1;
@@ -228,17 +230,20 @@ class Planner {
       if (bad <= last && !(beyond.bound_v && !(*beyond.bound_v >= target_v(from, bad)))) proven = false;
       if (good < from) {  // no setting holds even here
         keep(beyond, from, from);
+        ends.push_back(from);
         from = bad + 1;
         proven = false;
         continue;
       }
       keep(best, from, good);
+      ends.push_back(good);
       from = good + 1;
     }
     if (proven && one_target()) plan_.fewest_settings = num;
-    // Settings for single places stand by, for points between those looked at.
-    for (std::int64_t place = 0; place <= last && !control_.stopped(); place += std::max<std::int64_t>(1, last / 4)) {
-      keep(best_for(place, place), place, place);
+    // The last place of one stretch and the first of the next were looked at, what lies between them
+    // was not: a setting for both stands by.
+    for (const std::int64_t end : ends) {
+      if (end < last && !control_.stopped()) keep(best_for(end, end + 1), end, end + 1);
     }
   }
 

@@ -46,6 +46,7 @@ struct SweepRecord {
   struct Shared {
     double eye_mv = 0.0;
     bool met = false;
+    bool allowed = true;  ///< the receiver's input limit is kept
     friend bool operator==(const Shared&, const Shared&) = default;
   };
   std::int64_t point = 0;
@@ -136,11 +137,13 @@ class SweepSummary {
 
   struct OfShared {
     std::int64_t met = 0;
+    std::int64_t not_allowed = 0;  ///< points whose receiver it would overdrive
     std::optional<double> least_margin_mv;
     std::int64_t least_point = 0;
   };
   std::vector<OfShared> of_shared;
-  /// The shared setting whose least margin is largest; none when no point has been tried.
+  /// The shared setting whose least margin is largest, of those allowed at most points; none when
+  /// no point has been tried.
   [[nodiscard]] std::optional<std::size_t> one_for_all() const;
   /// The least sum of settings that the plan has for the whole switch axis: each stretch goes as
   /// far as any setting carries it, which no other choice of stretches undercuts. Empty unless
