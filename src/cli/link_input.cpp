@@ -30,20 +30,42 @@ std::vector<LinkChange> changes_from(const Arguments& arguments) {
   return changes;
 }
 
-std::optional<EyeModel> model_from(const Arguments& arguments, Console& console) {
-  const std::vector<LinkChange> changes = changes_from(arguments);
+std::optional<LinkSource> source_from(const Arguments& arguments, Console& console) {
+  LinkSource source;
+  source.changes = changes_from(arguments);
   const auto file = arguments.text("LINK");
-  const Result<Link> link =
-      file ? read_link(*file, changes) : parse_link(example_link(), "built-in sample", "", changes);
+  if (!file) {
+    source.text = example_link();
+    source.file_name = "built-in sample";
+    if (!console.quiet) {
+      console.err << "tapwright: no link file given, so this is the built-in sample "
+                     "(tapwright example prints it)\n";
+    }
+    return source;
+  }
+  Result<TextFile> text = read_text_file(*file);
+  if (!text) {
+    console.tell(text.notes);
+    return std::nullopt;
+  }
+  source.text = std::move(text.value->text);
+  source.file_name = *file;
+  source.base_directory = std::filesystem::path(*file).parent_path().string();
+  return source;
+}
+
+std::optional<EyeModel> model_from(const LinkSource& source, Console& console) {
+  const Result<Link> link = read_link(source);
   if (!link) {
     console.tell(link.notes);
     return std::nullopt;
   }
-  if (!file && !console.quiet) {
-    console.err << "tapwright: no link file given, so this is the built-in sample "
-                   "(tapwright example prints it)\n";
-  }
   return prepare(*link.value);
+}
+
+std::optional<EyeModel> model_from(const Arguments& arguments, Console& console) {
+  const auto source = source_from(arguments, console);
+  return source ? model_from(*source, console) : std::nullopt;
 }
 
 bool outputs_can_be_written(const Arguments& arguments, Console& console,

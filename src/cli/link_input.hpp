@@ -8,6 +8,7 @@
 #include "tapwright/eye/eye_model.hpp"
 #include "tapwright/link/read_link.hpp"
 #include "tapwright/link/settings_file.hpp"
+#include "tapwright/study/link_source.hpp"
 
 namespace tapwright::cli {
 
@@ -20,6 +21,10 @@ namespace tapwright::cli {
 
 /// `path` from the root, so that it can be named in a link file elsewhere.
 [[nodiscard]] std::string absolute_path(const std::string& path);
+/// The text of that link file with the changes, to be read again with more of them; empty after
+/// telling why not.
+[[nodiscard]] std::optional<LinkSource> source_from(const Arguments& arguments, Console& console);
+[[nodiscard]] std::optional<EyeModel> model_from(const LinkSource& source, Console& console);
 
 /// Checks every output option before the long work; false after telling what is wrong. Two outputs
 /// may not both go to standard output.

@@ -3,7 +3,9 @@
 #include <ostream>
 
 #include "cli/command.hpp"
+#include "tapwright/base/text.hpp"
 #include "tapwright/link/read_link.hpp"
+#include "tapwright/study/study_file.hpp"
 
 namespace tapwright::cli {
 
@@ -17,9 +19,15 @@ Command example_command() {
 }
 
 Command schema_command() {
-  return {"schema", "print the JSON Schema of link files, every key documented", "", common_rows(),
-          [](const Arguments&, Console& console) {
-            console.out << link_schema();
+  std::vector<OptionRow> rows = {{"WHAT", "", "link", "link or study"}};
+  for (OptionRow& row : common_rows()) rows.push_back(std::move(row));
+  return {"schema", "print the JSON Schema of link or study files, every key documented", "", rows,
+          [](const Arguments& arguments, Console& console) {
+            const std::string what = arguments.text("WHAT").value_or("link");
+            if (what != "link" && what != "study") {
+              throw BadArgument{"found " + shown_text(what) + ", wanted link or study"};
+            }
+            console.out << (what == "link" ? link_schema() : study_schema());
             return ExitCode::kOk;
           }};
 }

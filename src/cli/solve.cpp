@@ -1,10 +1,12 @@
 #include <ostream>
 
 #include "cli/link_input.hpp"
+#include "tapwright/base/text.hpp"
 #include "tapwright/report/html_report.hpp"
 #include "tapwright/report/output_file.hpp"
 #include "tapwright/report/solution_report.hpp"
 #include "tapwright/search/solve.hpp"
+#include "tapwright/study/parameter_sensitivity.hpp"
 
 namespace tapwright::cli {
 namespace {
@@ -23,10 +25,22 @@ ExitCode run_solve(const Arguments& arguments, Console& console) {
       return ExitCode::kBadInput;
     }
   }
-  const auto model = model_from(arguments, console);
+  const std::string extent = arguments.text("--sensitivity").value_or("all");
+  if (extent != "all" && extent != "knobs") {
+    throw BadArgument{"--sensitivity: found " + shown_text(extent) + ", wanted knobs or all"};
+  }
+  ParameterStudyOptions study;
+  study.num_draws = static_cast<int>(arguments.integer("--draws", 0, 1'000'000).value_or(study.num_draws));
+  study.seed = static_cast<std::uint64_t>(arguments.integer("--seed", 0, 1LL << 53).value_or(1));
+  const auto source = source_from(arguments, console);
+  const auto model = source ? model_from(*source, console) : std::nullopt;
   if (!model) return ExitCode::kBadInput;
 
-  const SolutionReport report = report_on(*model, solve(*model, options, control));
+  SolutionReport report = report_on(*model, solve(*model, options, control));
+  if (extent == "all" && !control.stopped()) {
+    report.parameters = parameter_study(*model, *source, report.solution.settings,
+                                        report.sensitivity, study, control);
+  }
   control.report(1.0, "search");
   if (console.stop.stop_requested()) {
     console.error("stopped; nothing was written");
@@ -67,6 +81,11 @@ Command solve_command() {
                 {"--figures", "DIR", "", "write the report's figures as SVG files into a directory"},
                 {"--max-nodes", "N", "50000000", "boxes of FIR codes to look at before settling for a bound"},
                 {"--max-seconds", "S", "none", "likewise in seconds; the answer may then differ between runs"},
+                {"--sensitivity", "EXTENT", "all",
+                 "knobs: each knob one code off; all: also each parameter of channel and devices off, "
+                 "alone and together"},
+                {"--draws", "N", "40", "random draws of all parameters at once, for the yield"},
+                {"--seed", "N", "1", "seed of the draws"},
                 threads_row()};
             for (OptionRow& row : common_rows()) rows.push_back(std::move(row));
             return rows;

@@ -217,7 +217,7 @@ ExitCode run_sweep(const Arguments& arguments, Console& console) {
 Command sweep_command() {
   return {"sweep",
           "best codes over many lengths, rates, corners or channels; where to switch between settings",
-          "STUDY is a study file (tapwright schema --study prints every key): axes over a base link. "
+          "STUDY is a study file (tapwright schema study prints every key): axes over a base link. "
           "Every combination is a point. The answer: each point's best codes, one setting for all "
           "points, the fewest settings along one axis that keep every point at its target, and how "
           "many points meet it. The exit code is 1 when a point misses its target with its own best "

@@ -95,6 +95,53 @@ Json change_json(const std::optional<KnobSensitivity::Change>& change) {
   return {{"fixed_mv", mv(change->fixed_v)}, {"readapted_mv", mv(change->readapted_v)}};
 }
 
+Json eye_json(const std::optional<StrayedEye>& eye) {
+  if (!eye) return nullptr;
+  return {{"fixed_mv", mv(eye->fixed_v)}, {"readapted_mv", mv(eye->readapted_v)}};
+}
+
+Json parameters_json(const EyeModel& model, const ParameterStudy& study) {
+  Json parameters = Json::array();
+  for (const ParameterSensitivity& p : study.parameters) {
+    parameters.push_back({{"parameter", p.parameter.name},
+                          {"spread", p.parameter.spread},
+                          {"down", eye_json(p.low)},
+                          {"up", eye_json(p.high)}});
+  }
+  Json corners = Json::array();
+  for (const Corner& c : study.corners) {
+    Json strays = Json::object();
+    for (std::size_t i = 0; i < c.strays.size(); ++i) {
+      if (c.strays[i] != 0.0) strays[study.parameters[i].parameter.name] = c.strays[i];
+    }
+    corners.push_back({{"corner", c.name},
+                       {"spreads", strays},
+                       {"eye_mv", eye_json(c.eye)},
+                       {"target_met", c.met}});
+  }
+  Json alternatives = Json::array();
+  for (const Alternative& a : study.alternatives) {
+    alternatives.push_back({{"name", a.name},
+                            {"settings", settings_json(model, a.settings)},
+                            {"eye_mv", mv(a.height_v)},
+                            {"price_mv", mv(study.nominal_v - a.height_v)},
+                            {"least_eye_mv", mv(a.least_v)},
+                            {"note", a.note}});
+  }
+  Json out = {{"parameters", parameters},
+              {"corners", corners},
+              {"least_eye_mv", mv(study.least_v)},
+              {"alternatives", alternatives},
+              {"in_words", study.sentences}};
+  if (study.draws) {
+    const Draws& d = *study.draws;
+    out["draws"] = {{"count", d.count},           {"seed", d.seed},
+                    {"met_fixed", d.met_fixed},   {"met_readapted", d.met},
+                    {"least_eye_mv", mv(d.least_v)}, {"median_eye_mv", mv(d.median_v)}};
+  }
+  return out;
+}
+
 }  // namespace
 
 std::string json_of(const SolutionReport& report) {
@@ -143,6 +190,7 @@ std::string json_of(const SolutionReport& report) {
                            {"up", change_json(k.up)}});
   }
   out["sensitivity"] = {{"knobs", sensitivity}};
+  if (report.parameters) out["sensitivity"].update(parameters_json(model, *report.parameters));
   out["limited_by"] = report.limited_by;
   out["span_ui"] = model.span_ui;
   out["span_reason"] = model.span_reason;

@@ -149,6 +149,41 @@ std::string sensitivity_section(const std::vector<KnobSensitivity>& all) {
   return "One code either way, change of the eye in mV\n" + table_text(rows);
 }
 
+std::string parameters_section(const ParameterStudy& study) {
+  Rows rows{{"parameter", "off by", "less", "more", "less, follows", "more, follows"}};
+  for (const ParameterSensitivity& p : study.parameters) {
+    const auto cell = [](const std::optional<StrayedEye>& eye, bool follows) {
+      return eye ? change_mv(follows ? eye->readapted_v : eye->fixed_v) : std::string("-");
+    };
+    rows.push_back({p.parameter.name, p.parameter.spread, cell(p.low, false), cell(p.high, false),
+                    cell(p.low, true), cell(p.high, true)});
+  }
+  std::string text = "When channel or devices are off, change of the eye in mV\n" + table_text(rows);
+  text += item_text("  ", "Spreads are round figures of common practice; \"follows\": DFE and "
+                          "sampling instant adapt. A one-sided parameter stands under \"more\".");
+  for (const std::string& sentence : study.sentences) text += item_text("  ", sentence);
+  text += "\nAll off at once\n";
+  Rows all{{"", "eye, mV", "DFE follows", "target"}};
+  for (const Corner& c : study.corners) {
+    all.push_back({c.name, mv(c.eye.fixed_v), mv(c.eye.readapted_v), c.met ? "met" : "missed"});
+  }
+  text += table_text(all);
+  if (study.draws) {
+    const Draws& d = *study.draws;
+    text += item_text("  ", "Of " + std::to_string(d.count) + " random draws (seed " +
+                                std::to_string(d.seed) + ") " + std::to_string(d.met) +
+                                " meet the target, " + std::to_string(d.met_fixed) +
+                                " with every knob fixed; least eye " + mv(d.least_v) +
+                                " mV, median " + mv(d.median_v) + " mV.");
+  }
+  for (const Alternative& a : study.alternatives) {
+    text += item_text("  ", "The " + a.name + " setting costs " +
+                                mv(study.nominal_v - a.height_v) + " mV on the link as described: " +
+                                a.note + ".");
+  }
+  return text;
+}
+
 }  // namespace
 
 std::string signal_line(const Link& link) {
@@ -212,7 +247,7 @@ std::string caution() {
 }
 
 SolutionReport report_on(const EyeModel& model, Solution solution) {
-  SolutionReport report{&model, std::move(solution), {}, {}};
+  SolutionReport report{&model, std::move(solution), {}, {}, {}};
   report.sensitivity = knob_sensitivity(model, report.solution.settings);
   report.limited_by = what_limits(model, report.solution.settings, report.solution.score);
   return report;
@@ -232,6 +267,7 @@ std::string text_of(const SolutionReport& report) {
   if (!s.compared.empty()) text += compared_section(report) + "\n";
   const std::string steps = sensitivity_section(report.sensitivity);
   if (!steps.empty()) text += steps + "\n";
+  if (report.parameters) text += parameters_section(*report.parameters) + "\n";
   text += budget_section(report);
   text += "\nTaken as given\n";
   for (const std::string& line : assumption_lines(report)) text += item_text("  ", line);

@@ -20,11 +20,6 @@ const KnobValue* find(const std::vector<KnobValue>& knobs, const std::string& na
   return at == knobs.end() ? nullptr : &*at;
 }
 
-bool same_codes(const std::vector<Code>& a, const std::vector<Code>& b) {
-  return std::equal(a.begin(), a.end(), b.begin(), b.end(),
-                    [](const Code& x, const Code& y) { return x.code == y.code; });
-}
-
 }  // namespace
 
 std::vector<KnobValue> knob_values(const EyeModel& model, const Settings& settings) {
@@ -101,17 +96,16 @@ bool keeps_input_limit(const EyeModel& model, const Settings& settings) {
 bool same_knobs(const Device& a, const Device& b) {
   const FirLimits& fa = a.transmitter.fir;
   const FirLimits& fb = b.transmitter.fir;
-  return same_codes(a.transmitter.swings, b.transmitter.swings) &&
-         fa.taps.size() == fb.taps.size() &&
-         std::equal(fa.taps.begin(), fa.taps.end(), fb.taps.begin(),
+  return a.transmitter.swings == b.transmitter.swings && fa.peak_limit == fb.peak_limit &&
+         fa.min_main == fb.min_main &&
+         std::equal(fa.taps.begin(), fa.taps.end(), fb.taps.begin(), fb.taps.end(),
                     [](const FirTap& x, const FirTap& y) {
-                      return x.position == y.position && x.is_remainder == y.is_remainder &&
-                             same_codes(x.codes, y.codes);
+                      return x.position == y.position && x.min == y.min && x.max == y.max &&
+                             x.codes == y.codes && x.is_remainder == y.is_remainder;
                     }) &&
          std::equal(a.receiver.ctle.begin(), a.receiver.ctle.end(), b.receiver.ctle.begin(),
                     b.receiver.ctle.end(), [](const CtleState& x, const CtleState& y) {
-                      return x.code == y.code && x.gain.has_value() == y.gain.has_value() &&
-                             (!x.gain || x.gain->code == y.gain->code);
+                      return x.code == y.code && x.gain == y.gain;
                     });
 }
 

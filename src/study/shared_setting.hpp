@@ -26,7 +26,8 @@ namespace tapwright {
 /// Whether the receiver's input stays within its limit, where it has one.
 [[nodiscard]] bool keeps_input_limit(const EyeModel& model, const Settings& settings);
 
-/// Whether one setting of swing, FIR, CTLE and gain means the same on both: equal codes.
+/// Whether swings, FIR and the CTLE's codes are the same on both, so that a setting can be shared;
+/// what a CTLE code does to the signal may differ.
 [[nodiscard]] bool same_knobs(const Device& a, const Device& b);
 
 }  // namespace tapwright

@@ -107,7 +107,7 @@ class Reader {
       return false;
     }
     study.link = {file.value->text, path, fs::path(path).parent_path().string(),
-                  changes_of(document_.root.at("changes"))};
+                  changes_of(document_.root.at("changes")), std::make_shared<LinkCache>()};
     const Result<Link> link = read_link(study.link);
     if (!link) {
       adopt(study.link.changes.empty() ? "link" : "changes", link.notes);

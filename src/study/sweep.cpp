@@ -60,7 +60,7 @@ Least least(const Least& a, const Least& b) { return !a ? b : !b ? a : std::min(
 }  // namespace
 
 SweepRecord solve_point(const Study& study, const SweepPlan& plan, std::int64_t point,
-                        const SearchOptions& options) {
+                        const SearchOptions& options, const RunControl& control) {
   SweepRecord record;
   record.point = point;
   const Result<Link> link = read_link(study.link, study.changes(study.places(point)));
@@ -72,7 +72,7 @@ SweepRecord solve_point(const Study& study, const SweepPlan& plan, std::int64_t 
   SearchOptions alone = options;
   alone.compare = false;
   alone.certificate = false;
-  const Solution best = solve(model, alone);
+  const Solution best = solve(model, alone, control);
   record.knobs = knob_values(model, best.settings);
   record.eye_mv = v_to_mv(objective_of(model.link, best.score.height));
   record.target_mv = v_to_mv(model.link.target.eye_height_v);
@@ -107,6 +107,7 @@ std::int64_t run_points(const Study& study, const SweepPlan& plan, const SweepPa
   bool ended = false;
   std::exception_ptr failure;
 
+  const RunControl alone{control.stop, {}, 1};
   const auto work = [&](int) {
     for (;;) {
       std::int64_t nth = 0;
@@ -122,7 +123,7 @@ std::int64_t run_points(const Study& study, const SweepPlan& plan, const SweepPa
       }
       SweepRecord record;
       try {
-        record = solve_point(study, plan, part.point(nth), options);
+        record = solve_point(study, plan, part.point(nth), options, alone);
       } catch (...) {
         const std::scoped_lock lock(mutex);
         if (!failure) failure = std::current_exception();

@@ -1,11 +1,13 @@
 #pragma once
 // The answer of `solve` and `score`, as text for people and as JSON for programs.
 
+#include <optional>
 #include <string>
 #include <vector>
 
 #include "tapwright/search/solution.hpp"
 #include "tapwright/study/knob_sensitivity.hpp"
+#include "tapwright/study/parameter_sensitivity.hpp"
 
 namespace tapwright {
 
@@ -15,6 +17,7 @@ struct SolutionReport {
   Solution solution;  ///< for a given setting: its settings and score, no proof
   std::vector<KnobSensitivity> sensitivity;
   std::vector<std::string> limited_by;
+  std::optional<ParameterStudy> parameters;
 };
 
 /// Computes what the report adds to the solution. `model` must outlive the result.

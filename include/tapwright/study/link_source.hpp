@@ -1,6 +1,7 @@
 #pragma once
 // A link as text, so that it can be built again with something changed.
 
+#include <memory>
 #include <string>
 #include <vector>
 
@@ -13,6 +14,8 @@ struct LinkSource {
   std::string file_name;       ///< labels the notes
   std::string base_directory;  ///< where relative names count from
   std::vector<LinkChange> changes;
+  /// Shared by the copies: what was read once is not read again.
+  std::shared_ptr<LinkCache> cache = std::make_shared<LinkCache>();
 };
 
 /// The link with `more` applied after the source's own changes. Errors: as parse_link.

@@ -67,9 +67,10 @@ struct SweepRecord {
 [[nodiscard]] SweepPlan plan_sweep(const Study& study, const SearchOptions& options = {},
                                    const RunControl& control = {});
 
-/// One point on its own.
+/// One point on its own. Means nothing when the run was stopped meanwhile.
 [[nodiscard]] SweepRecord solve_point(const Study& study, const SweepPlan& plan,
-                                      std::int64_t point, const SearchOptions& options = {});
+                                      std::int64_t point, const SearchOptions& options = {},
+                                      const RunControl& control = {});
 
 /// Part `index` (from 0) of `count`: every count-th point.
 struct SweepPart {
