@@ -80,7 +80,7 @@ struct InputFile {
   std::string path;
   std::string sha256;
   /// Of a Touchstone file on the way from driver to receiver: the ports that it was read between.
-  std::optional<PortMap> ports;
+  std::optional<PortMap> ports = std::nullopt;
 };
 
 struct Link {
