@@ -55,7 +55,7 @@ std::vector<Moved> moved_numbers(ParameterKind kind, const std::vector<LinkNumbe
     };
     switch (kind) {
       case ParameterKind::kLength:
-        if (channel && key == "length_m") take(kLengthShare);
+        if (channel && (key == "length_m" || key == "stretch")) take(kLengthShare);
         break;
       case ParameterKind::kLoss:
         if (channel && (key == "loss_db_per_m" || key == "a1_sqrt_ns_per_mm" ||

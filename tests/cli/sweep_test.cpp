@@ -101,7 +101,7 @@ TEST_F(SweepCommand, JsonAndCsvHoldEveryPoint) {
   std::string line;
   std::getline(csv, line);
   EXPECT_EQ(line.substr(0, line.find(",eye_mv")),
-            "point,post (V),noise,swing_mvppd,swing_code,fir:-1,fir:-1_code,fir:0,fir:0_code,fir:1,"
+            "point,post,noise,swing_mvppd,swing_code,fir:-1,fir:-1_code,fir:0,fir:0_code,fir:1,"
             "fir:1_code,ctle_code,dfe:1_mv,dfe:1_code,phase_ui");
   std::getline(csv, line);
   EXPECT_EQ(line.substr(0, line.find("cold")), "0,0,\"quiet, \"\"");  // quoted as RFC 4180 has it
