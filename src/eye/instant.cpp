@@ -76,11 +76,6 @@ Eigen::VectorXd aggressors_at_error_ratio(const PlacedEye& eye, const Eigen::Vec
   return all;
 }
 
-bool is_coded(const EyeModel& model) {
-  const LineCodeKind kind = model.link.signal.line_code.kind;
-  return kind != LineCodeKind::kNone;
-}
-
 LineCode code_of(const EyeModel& model) {
   return LineCode::from(model.link.signal.line_code, model.link.signal.levels);
 }

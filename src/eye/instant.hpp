@@ -49,8 +49,6 @@ struct Instant {
 [[nodiscard]] Eigen::VectorXd aggressors_at_error_ratio(const PlacedEye& eye,
                                                         const Eigen::VectorXd& fir);
 
-/// Whether the link's symbols are not independent.
-[[nodiscard]] bool is_coded(const EyeModel& model);
 [[nodiscard]] LineCode code_of(const EyeModel& model);
 
 /// Worst-case interference that the code's sequences can make.
