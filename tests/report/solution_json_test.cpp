@@ -28,7 +28,7 @@ TEST(SolutionJson, TheWorstSequenceReplaysTheWorstCase) {
   solution.settings = test::plain_settings(link);
   solution.settings.dfe_v[0] = 0.1;
   solution.score = score(model, solution.settings);
-  const auto json = nlohmann::json::parse(json_of({&model, solution, {}, {}}));
+  const auto json = nlohmann::json::parse(json_of(report_on(model, solution)));
 
   const auto symbols = json["worst_sequence"]["symbols"].get<std::string>();
   const auto main_at = json["worst_sequence"]["main_at"].get<Eigen::Index>();

@@ -147,7 +147,7 @@ TEST_F(Sweep, TheSwitchTableIsTheFewestThatCodesAllow) {
   for (std::size_t i = 0; i < table.size(); ++i) {
     ASSERT_TRUE(table[i].shared);
     EXPECT_GE(*table[i].least_margin_mv, 0.0);
-    if (i > 0) EXPECT_EQ(table[i].from, table[i - 1].to + 1);
+    if (i > 0) { EXPECT_EQ(table[i].from, table[i - 1].to + 1); }
   }
   EXPECT_EQ(summary.met_by_table(), 17);
 }
