@@ -17,8 +17,8 @@ SweepPart part_from(const Arguments& arguments) {
   const auto index = parse_integer(text->substr(0, slash));
   const auto count = slash == std::string::npos ? std::nullopt : parse_integer(text->substr(slash + 1));
   if (!index || !count || *index < 1 || *count < *index || *count > 1'000'000) {
-    throw BadArgument{"--part: found \"" + shown_text(*text) +
-                      "\", wanted I/N with I from 1 to N, such as 2/8"};
+    throw BadArgument{"--part: found " + shown_text(*text) +
+                      ", wanted I/N with I from 1 to N, such as 2/8"};
   }
   return {*index - 1, *count};
 }

@@ -85,11 +85,12 @@ const std::map<std::string, std::string>& links() {
       {"cascade", R"({
   "format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 5, "samples_per_ui": 8},
   "channel": {"cascade": [
-    {"touchstone": {"file": "half.s2p"}},
+    {"touchstone": {"file": "half.s2p", "repair": "nearest_passive"}},
     {"line": {"length_m": 0.1, "loss_db_per_m": [[1, 5], [4, 13]], "delay_ns_per_m": 6,
               "impedance_ohm": 95}},
     {"line": {"length_m": 0.05, "gamma0_per_mm": 1e-5, "a1_sqrt_ns_per_mm": 4e-4,
-              "a2_ns_per_mm": 2e-4, "tau_ns_per_mm": 6e-3, "impedance_ohm": 105}},
+              "a2_ns_per_mm": 2e-4, "tau_ns_per_mm": 6e-3, "impedance_ohm": 105,
+              "dispersion": {"rise": 0.1, "knee_ghz": 8}}},
     {"line": {"length_m": 0.02, "r_ohm_per_m": 5, "l_nh_per_m": 500, "g_s_per_m": 0.001,
               "c_pf_per_m": 55}},
     {"line": {"length_m": 0.03, "pair": true,
