@@ -5,6 +5,7 @@
 #include <numeric>
 #include <stdexcept>
 
+#include "study/shared_setting.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
 #include "tapwright/eye/sampling.hpp"
@@ -165,7 +166,7 @@ AuditedLane audit_one(const ReadBackLane& lane, const ReadBackSettings& given, c
     }
     if (std::abs(r.value - best[i].value) < 1e-9 && r.code == best[i].code) continue;
     const auto there = with_knob_of(device, out.read_back, out.best.settings, r.knob);
-    if (!there) continue;
+    if (!there || !keeps_input_limit(model, *there)) continue;
     KnobCost cost{r.knob, r.shown, best[i].shown, {}, 0.0, 0.0};
     const auto from = place_in_list(device, out.best.settings, r.knob);
     const auto to = place_in_list(device, out.read_back, r.knob);

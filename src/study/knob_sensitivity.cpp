@@ -3,6 +3,7 @@
 #include <algorithm>
 #include <cmath>
 
+#include "study/shared_setting.hpp"
 #include "tapwright/base/text.hpp"
 #include "tapwright/base/units.hpp"
 #include "tapwright/eye/sampling.hpp"
@@ -25,7 +26,7 @@ std::vector<KnobSensitivity> knob_sensitivity(const EyeModel& model, const Setti
     KnobSensitivity s{reading.knob, reading.shown, {}, {}};
     for (const int step : {-1, 1}) {
       const auto there = moved(device, settings, reading.knob, step, main_v);
-      if (!there) continue;
+      if (!there || !keeps_input_limit(model, *there)) continue;
       KnobSensitivity::Change change;
       change.fixed_v = objective_height_v(model, *there) - here_v;
       change.readapted_v = reading.knob.kind == Knob::Kind::kDfe
