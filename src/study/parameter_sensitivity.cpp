@@ -454,8 +454,10 @@ ParameterStudy parameter_study(const EyeModel& model, const LinkSource& source,
     SearchOptions search;
     search.compare = false;
     const JointSolution joint = solve_together(set, search, control);
-    Alternative robust{"robust", joint.settings, 0.0, 0.0, ""};
-    robust.settings = readapted(model, joint.settings);
+    // Empty where no setting keeps the limits on all three; the answer is then as robust as any.
+    Alternative robust{"robust", joint.settings_of.empty() ? settings : joint.settings, 0.0, 0.0, ""};
+    const Settings shared = robust.settings;
+    robust.settings = readapted(model, shared);
     robust.height_v = objective_height_v(model, robust.settings);
     robust.least_v = robust.height_v;
     double answer_least_v = out.nominal_v;
@@ -463,7 +465,7 @@ ParameterStudy parameter_study(const EyeModel& model, const LinkSource& source,
       const auto least = [&](double& least_v, const Settings& s) {
         least_v = std::min(least_v, objective_height_v(set[i], readapted(set[i], s)));
       };
-      least(robust.least_v, joint.settings);
+      least(robust.least_v, shared);
       least(answer_least_v, settings);
     }
     // The answer itself is one of the settings to choose from.

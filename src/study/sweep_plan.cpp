@@ -140,6 +140,10 @@ class Planner {
       std::vector<EyeModel> models;
       for (const Scout* scout : binding) models.push_back(scout->model);
       const JointSolution joint = solve_together(models, options_, control_);
+      if (joint.settings_of.empty()) {  // nothing keeps the limits of all of them
+        if (!control_.stopped()) best.bound_v = kImpossible_v;
+        break;
+      }
       const std::vector<KnobValue> knobs =
           shared_knobs(models.front().link.device, joint.settings);
       if (joint.proof.kind == Proof::Kind::kProven || joint.proof.kind == Proof::Kind::kBounded) {
@@ -204,7 +208,7 @@ class Planner {
     const auto last = static_cast<std::int64_t>(places_.size()) - 1;
     const Together all = best_for(0, last);
     keep(all, 0, last);
-    if (one_target() && all.bound_v) {
+    if (one_target() && all.bound_v && *all.bound_v > kImpossible_v) {
       plan_.shared_bound_mv = v_to_mv(*all.bound_v - scouts_.front().model.link.target.eye_height_v);
     }
     bool proven = true;

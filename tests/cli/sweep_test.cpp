@@ -171,7 +171,7 @@ TEST_F(SweepCommand, ATornLastRecordIsDoneAgain) {
 }
 
 TEST_F(SweepCommand, KilledAtRandomAndRerunGivesTheSameBytes) {
-  const std::string path = study(400);
+  const std::string path = study(100);
   const std::vector<std::string> plain = {"sweep", path, "--threads", "2", "--csv", "out.csv",
                                           "--json", "out.json", "--state", "state"};
   Conditions calm;
@@ -221,9 +221,9 @@ TEST_F(SweepCommand, MemoryDoesNotGrowWithTheNumberOfPoints) {
     getrusage(RUSAGE_CHILDREN, &usage);  // the largest of all children so far
     return usage.ru_maxrss;
   };
-  const long few = peak_kib(100);
+  const long few = peak_kib(400);
   const long many = peak_kib(2000);
-  // 5700 more points; kept in memory, a record alone takes over 500 bytes, 2.8 MiB in all. The
+  // 4800 more points; kept in memory, a record alone takes over 500 bytes, 2.4 MiB in all. The
   // allocator's own rounding stays under 1 MiB.
   EXPECT_LT(many - few, 1024);
 }

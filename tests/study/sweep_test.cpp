@@ -6,6 +6,7 @@
 
 #include <algorithm>
 #include <cmath>
+#include <fstream>
 
 #include "support/input_files.hpp"
 #include "tapwright/base/units.hpp"
@@ -156,6 +157,52 @@ TEST_F(Sweep, TheSwitchTableIsTheFewestThatCodesAllow) {
     if (i > 0) { EXPECT_EQ(table[i].from, table[i - 1].to + 1); }
   }
   EXPECT_EQ(summary.met_by_table(), 9);
+}
+
+TEST_F(Sweep, TheSwitchTableIsTheFewestThatTheSwingsAllow) {
+  // A flat pulse of one UI and height a: the eye is swing x a, and so is the receiver's input. The
+  // target is 250 mV, the limit 600 mVppd: from the left, always the swing that carries furthest.
+  const std::string link = R"({"format": "tapwright.link/1", "signal": {"symbol_rate_gbd": 1, "span_ui": [2, 2]},
+    "channel": {"pulse": {"samples_v": [0, 0, 1, 1, 0, 0], "samples_per_ui": 2}},
+    "transmitter": {"swing_mvppd": [300, 600, 1000]},
+    "receiver": {"peak_input_mvppd": 600}, "target": {"eye_height_mv": 250}})";
+  const std::string folder = testing::TempDir();
+  std::ofstream(folder + "/swing_link.json") << link;
+  const Result<Study> read = parse_study(
+      R"({"format": "tapwright.study/1", "link": "swing_link.json", "axes": [{"name": "height",
+          "key": "channel.pulse.at_swing_mvppd", "from": 2000, "to": 6500, "step": 250}]})",
+      "study.json", folder);
+  ASSERT_TRUE(read) << to_string(read.notes.front());
+  const Study& study = *read.value;
+  const SweepPlan plan = plan_sweep(study);
+  const SweepSummary summary = summary_of(study, plan, records_of(study, plan, 1));
+  // Taken at a larger swing, the same record is a smaller pulse: a = 2000 / at_swing.
+  std::vector<std::pair<int, int>> wanted;
+  for (int at = 0; at < 19;) {
+    int furthest = at;
+    for (const double swing : {300.0, 600.0, 1000.0}) {
+      int to = at;
+      for (; to < 19; ++to) {
+        const double eye_mv = swing * 2000.0 / (2000.0 + 250.0 * to);
+        if (eye_mv < 250.0 || eye_mv > 600.0 * (1.0 + 1e-12)) break;
+      }
+      furthest = std::max(furthest, to);
+    }
+    ASSERT_GT(furthest, at);
+    wanted.emplace_back(at, furthest - 1);
+    at = furthest;
+  }
+  ASSERT_EQ(wanted.size(), 2u);
+  const std::vector<SwitchStretch> table = summary.switch_table();
+  ASSERT_EQ(table.size(), wanted.size());
+  EXPECT_EQ(plan.fewest_settings, 2);
+  for (std::size_t i = 0; i < table.size(); ++i) {
+    ASSERT_TRUE(table[i].shared);
+    EXPECT_EQ(table[i].from, wanted[i].first);
+    EXPECT_EQ(table[i].to, wanted[i].second);
+    EXPECT_GE(*table[i].least_margin_mv, 0.0);
+  }
+  EXPECT_EQ(summary.met_by_table(), 19);
 }
 
 TEST_F(Sweep, ATargetOutOfReachLeavesAGapInTheTable) {
