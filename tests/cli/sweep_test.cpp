@@ -171,7 +171,7 @@ TEST_F(SweepCommand, ATornLastRecordIsDoneAgain) {
 }
 
 TEST_F(SweepCommand, KilledAtRandomAndRerunGivesTheSameBytes) {
-  const std::string path = study(100);
+  const std::string path = study(400);
   const std::vector<std::string> plain = {"sweep", path, "--threads", "2", "--csv", "out.csv",
                                           "--json", "out.json", "--state", "state"};
   Conditions calm;
