@@ -1,3 +1,4 @@
+#include <algorithm>
 #include <ostream>
 
 #include "cli/link_input.hpp"
@@ -30,11 +31,15 @@ ExitCode run_solve(const Arguments& arguments, Console& console) {
     throw BadArgument{"--sensitivity: found " + shown_text(extent) + ", wanted knobs or all"};
   }
   ParameterStudyOptions study;
-  study.num_draws = static_cast<int>(arguments.integer("--draws", 0, 1'000'000).value_or(study.num_draws));
+  const auto draws = arguments.integer("--draws", 0, 1'000'000);
   study.seed = static_cast<std::uint64_t>(arguments.integer("--seed", 0, 1LL << 53).value_or(1));
   const auto source = source_from(arguments, console);
   const auto model = source ? model_from(*source, console) : std::nullopt;
   if (!model) return ExitCode::kBadInput;
+  // A draw transforms the record once: fewer of them where it is long keep a plain solve quick.
+  const long long affordable =
+      std::clamp<long long>(2'000'000 / model->link.channel.num_samples, 10, 40);
+  study.num_draws = static_cast<int>(draws.value_or(affordable));
 
   SolutionReport report = report_on(*model, solve(*model, options, control));
   if (extent == "all" && !control.stopped()) {
@@ -84,7 +89,7 @@ Command solve_command() {
                 {"--sensitivity", "EXTENT", "all",
                  "knobs: each knob one code off; all: also each parameter of channel and devices off, "
                  "alone and together"},
-                {"--draws", "N", "40", "random draws of all parameters at once, for the yield"},
+                {"--draws", "N", "10 to 40, by the record's length", "random draws of all parameters at once, for the yield"},
                 {"--seed", "N", "1", "seed of the draws"},
                 threads_row()};
             for (OptionRow& row : common_rows()) rows.push_back(std::move(row));
