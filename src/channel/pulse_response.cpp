@@ -21,12 +21,9 @@ PulseResponse::PulseResponse(Eigen::VectorXd samples_v, int samples_per_ui, doub
   if (!(std::isfinite(ui_s_) && ui_s_ > 0.0)) {
     throw std::invalid_argument("PulseResponse: ui_s must be finite and > 0");
   }
-}
-
-Eigen::Index PulseResponse::peak_index() const {
   // In two passes: the first one runs at memory speed, the second is short.
   const double peak_v = samples_v_.maxCoeff();
-  return std::find(samples_v_.begin(), samples_v_.end(), peak_v) - samples_v_.begin();
+  peak_index_ = std::find(samples_v_.begin(), samples_v_.end(), peak_v) - samples_v_.begin();
 }
 
 Eigen::VectorXd cursors_at(const PulseResponse& pulse, Eigen::Index sample_index, int num_pre,

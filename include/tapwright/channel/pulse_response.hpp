@@ -21,7 +21,7 @@ class PulseResponse {
   [[nodiscard]] double dt_s() const { return ui_s_ / samples_per_ui_; }
   [[nodiscard]] Eigen::Index size() const { return samples_v_.size(); }
   /// Index of the largest sample; the first of several equals.
-  [[nodiscard]] Eigen::Index peak_index() const;
+  [[nodiscard]] Eigen::Index peak_index() const { return peak_index_; }
   /// Sample at any index; 0 outside the record.
   [[nodiscard]] double at(Eigen::Index index) const {
     return index >= 0 && index < samples_v_.size() ? samples_v_[index] : 0.0;
@@ -31,6 +31,7 @@ class PulseResponse {
   Eigen::VectorXd samples_v_;
   int samples_per_ui_;
   double ui_s_;
+  Eigen::Index peak_index_ = 0;
 };
 
 /// The cursors p(t_s + kT), k = -num_pre ... num_post, with t_s at `sample_index`; zero outside.
