@@ -6,7 +6,7 @@
 
 packages_to_build=(libjs-chart.js cmake g++ libboost-dev libcli11-dev libeigen3-dev libnlopt-cxx-dev libssl-dev
                    ninja-build nlohmann-json3-dev pkg-config)
-packages_to_test=(chromium clang dpkg-dev file gcovr libbenchmark-dev libc6-dbg libclang-rt-14-dev
+packages_to_test=(chromium chromium-driver clang dpkg-dev file gcovr libbenchmark-dev libc6-dbg libclang-rt-14-dev
                   libgtest-dev llvm-14 ngspice python3-numpy python3-scipy valgrind)
 
 say() { printf '%s\n' "$*" >&2; }
