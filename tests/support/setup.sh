@@ -61,12 +61,7 @@ build() {
   done
   (($# > 0)) && shift
   local options=(-DCMAKE_BUILD_TYPE=Release "$@")
-  # The two do not go together: ccache does not keep what was made from precompiled headers.
-  if command -v ccache >/dev/null; then
-    options+=(-DCMAKE_CXX_COMPILER_LAUNCHER=ccache)
-  else
-    options+=(-DTAPWRIGHT_PRECOMPILE=ON)
-  fi
+  if command -v ccache >/dev/null; then options+=(-DCMAKE_CXX_COMPILER_LAUNCHER=ccache); fi
   mkdir -p "$directory"
   local log=$directory/build.log
   if ! { cmake -S "$top" -B "$directory" -G Ninja "${options[@]}" &&
