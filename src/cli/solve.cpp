@@ -38,7 +38,7 @@ ExitCode run_solve(const Arguments& arguments, Console& console) {
   if (!model) return ExitCode::kBadInput;
   // A draw transforms the record once: fewer of them where it is long keep a plain solve quick.
   const long long affordable =
-      std::clamp<long long>(2'000'000 / model->link.channel.num_samples, 10, 40);
+      std::clamp<long long>(2'000'000 / model->link.channel.num_samples, 6, 40);
   study.num_draws = static_cast<int>(draws.value_or(affordable));
 
   SolutionReport report = report_on(*model, solve(*model, options, control));
@@ -89,7 +89,7 @@ Command solve_command() {
                 {"--sensitivity", "EXTENT", "all",
                  "knobs: each knob one code off; all: also each parameter of channel and devices off, "
                  "alone and together"},
-                {"--draws", "N", "10 to 40, by the record's length", "random draws of all parameters at once, for the yield"},
+                {"--draws", "N", "6 to 40, by the record's length", "random draws of all parameters at once, for the yield"},
                 {"--seed", "N", "1", "seed of the draws"},
                 threads_row()};
             for (OptionRow& row : common_rows()) rows.push_back(std::move(row));
